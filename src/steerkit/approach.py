@@ -1,0 +1,76 @@
+"""Approach: from here to the goal at constant speed, braking only to stop inside the capture disc.
+
+The robot heads for the goal, the short way round, at its cruising speed. It brakes when
+
+- the stop along its present curve ends inside the disc (so a robot that circles inside the disc stops on its circle), or
+- the goal lies ahead, and the held speed must come down to end at the near edge of a smaller disc about it.
+
+Off to the side of the goal it does not brake: a speed and a gain outside the window of `sizing` circle the goal for ever.
+Everything counts from the pose at which the new command takes effect, coasted (`prediction`). Metres, seconds, radians; derived.
+"""
+
+from __future__ import annotations
+
+import math
+
+from steerkit.angles import difference_kernel
+from steerkit.compiled import kernel
+from steerkit.limits import held_speed_kernel, held_stop_kernel
+from steerkit.prediction import stop_end_kernel
+
+AHEAD = 0.5  # rad; a goal this close to the heading is driven at: the heading loop takes out the rest on the way
+
+
+@kernel
+def bearing_kernel(x: float, y: float, goal_x: float, goal_y: float) -> tuple[float, float]:
+    """Return distance (m) and bearing (rad, world frame) of the goal."""
+    dx = goal_x - x
+    dy = goal_y - y
+    return math.sqrt(dx * dx + dy * dy), math.atan2(dy, dx)
+
+
+@kernel
+def way_ahead_kernel(distance: float, error: float, radius: float) -> float:
+    """Return how far (m) along the heading the disc of `radius` about the goal is entered; infinite where the goal is not ahead.
+
+    A heading that passes the disc counts up to the point nearest to the goal.
+    """
+    across = distance * math.sin(error)
+    if math.cos(error) <= 0.0 or (abs(error) > AHEAD and abs(across) > radius):
+        return 0.0 if distance <= radius else math.inf
+    return distance * math.cos(error) - math.sqrt(max(0.0, radius * radius - across * across))
+
+
+@kernel
+def constant_speed_kernel(
+    x: float,
+    y: float,
+    heading: float,
+    v0: float,
+    w0: float,
+    goal_x: float,
+    goal_y: float,
+    stopping: bool,
+    cruise: float,
+    aim_radius: float,
+    stop_radius: float,
+    capture_radius: float,
+    braking: float,
+    turn_acceleration: float,
+    period: float,
+) -> tuple[float, float, float, bool]:
+    """Return bearing (rad), distance (m), speed (m/s; 0: stop along the curve), and whether the stop along the curve is on.
+
+    (v0, w0) is the command before. A stop begins when it ends within `stop_radius`, goes on while it ends within
+    `capture_radius`; at rest anywhere within `capture_radius` the robot stays.
+    """
+    distance, bearing = bearing_kernel(x, y, goal_x, goal_y)
+    path = held_stop_kernel(max(0.0, v0 - braking * period), braking, period)
+    end_x, end_y = stop_end_kernel(x, y, heading, v0, w0, braking, turn_acceleration, period, path)
+    short, _ = bearing_kernel(end_x, end_y, goal_x, goal_y)
+    if short <= (capture_radius if stopping or v0 == 0.0 else stop_radius):
+        return bearing, distance, 0.0, True
+    way = way_ahead_kernel(distance, difference_kernel(bearing, heading), aim_radius)
+    if way == math.inf:
+        return bearing, distance, cruise, False
+    return bearing, distance, held_speed_kernel(way, braking, period, cruise), False

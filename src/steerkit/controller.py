@@ -1,0 +1,365 @@
+"""Controller: the step that a control loop calls.
+
+Construction is where things fail, with a sentence. `step` is pure and never raises on data: the same memory and measurement give the
+same bits, and bad data becomes a stop within the limits and a cause that says why.
+"""
+
+from __future__ import annotations
+
+import math
+from struct import Struct
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from steerkit import compiled, sizing
+from steerkit.checks import check_above_zero, check_not_negative, shown
+from steerkit.platforms import Platform
+from steerkit.signals import HEAD, Causes, Command, Decision, Measurement, Memory, Motion, Phase, Pose, Report
+from steerkit.step import FAR, FAST, MEASURED, RESULT, Settings, fresh_kernel, in_place_kernel, step_kernel
+
+Array = NDArray[np.float64]
+
+FIFTEEN = Struct("15d")  # turns ints, float32 and bools into floats, and refuses strings, in a third of the time of float()
+NAN = math.nan
+PHASES = tuple(Phase)
+NOISE_RADII = 8.0  # standard deviations of position that the capture radius must span
+
+
+class Controller:
+    """Drives a platform to goals at constant speed.
+
+    Parameters
+    ----------
+    platform : Platform
+    capture_radius : float, m
+        Disc about the goal within which the middle of the axle shall come to rest.
+    speed : float, m/s, optional
+        Constant speed; the fastest workable one if not given. Above that one construction refuses.
+    gain : float, 1/s, optional
+        Heading gain; chosen in the window of `sizing` if not given. Outside the window construction refuses.
+    integral_time, derivative_time : float, s
+        For PI and PID; infinite and 0, the default, make P. A gain that then swings for ever is refused.
+    predict : bool
+        Take the heading error where the command takes effect (default), or at the measured pose.
+    stale_after : float, s, optional
+        Age at which a pose is too old to be carried; dead time plus three periods if not given.
+
+    Raises
+    ------
+    TypeError, ValueError
+        Numbers that cannot work, with the binding reason and the nearest that can.
+
+    Examples
+    --------
+    >>> cart = Platform(radius=0.30, track_width=0.42, wheel_speed_limit=1.1, speed_limit=0.9, turn_rate_limit=2.0,
+    ...                 acceleration=0.8, braking=1.2, turn_acceleration=5.0, period=0.05, dead_time=0.12)
+    >>> controller = Controller(cart, capture_radius=0.10)
+    >>> decision = controller.step(controller.start(time=0.0), Measurement(time=0.0, pose=(0, 0, 0), goal=(2, 0)))
+    >>> print(decision)
+    driving: +0.040 m/s, +0.000 rad/s; goal 2.000 m away, +0.0 deg off (acceleration limit)
+    """
+
+    __slots__ = ("_empty", "_plain", "_row", "_rows", "_size", "capture_radius", "platform", "settings", "window")
+
+    def __init__(
+        self,
+        platform: Platform,
+        *,
+        capture_radius: float,
+        speed: float | None = None,
+        gain: float | None = None,
+        integral_time: float = math.inf,
+        derivative_time: float = 0.0,
+        predict: bool = True,
+        stale_after: float | None = None,
+    ) -> None:
+        if not isinstance(platform, Platform):
+            raise TypeError(f"platform={platform!r} must be a Platform; build one from the robot's measured numbers")
+        self.platform = platform
+        self.capture_radius = checked_radius(platform, capture_radius)
+        self.window = sizing.window(platform, self.capture_radius, checked_speed(platform, speed), bool(predict))
+        cruise = self.window.fastest if speed is None else float(speed)
+        check_window(platform, self.window, cruise, self.capture_radius)
+        depth = sizing.shallow_depth(self.capture_radius, platform.position_noise)
+        self._set(
+            Settings(
+                period=platform.period,
+                dead_time=platform.dead_time,
+                motor_lag=platform.motor_lag,
+                top_speed=platform.top_speed,
+                reverse_speed=platform.reverse_speed_limit,
+                top_turn_rate=platform.turn_rate_limit,
+                wheel_speed=platform.wheel_speed_limit,
+                half_track=platform.track_width / 2.0,
+                acceleration=platform.acceleration,
+                braking=platform.braking,
+                turn_acceleration=platform.turn_acceleration,
+                position_noise=platform.position_noise,
+                heading_noise=platform.heading_noise,
+                capture_radius=self.capture_radius,
+                stay_radius=self.capture_radius + 4.0 * platform.position_noise,
+                stop_radius=self.capture_radius * (1.0 - depth / 2.0),
+                aim_radius=self.capture_radius * (1.0 - max(depth, 0.2)),
+                cruise=cruise,
+                ceiling=self.window.ceiling,
+                gain=checked_gain(platform, self.window, gain, integral_time, derivative_time, predict),
+                integral_time=float(integral_time),
+                derivative_time=float(derivative_time),
+                predict=float(bool(predict)),
+                stale_after=checked_age(platform, stale_after),
+            )
+        )
+
+    def _set(self, settings: Settings) -> None:
+        self.settings = settings
+        self._plain = list(settings)
+        self._row = np.array(settings)
+        held = 2.0 * settings.dead_time + settings.stale_after
+        self._rows = math.ceil(held / settings.period) + 3
+        self._size = HEAD + 3 * self._rows
+        self._row.setflags(write=False)
+        readable = np.zeros(self._size)
+        readable.setflags(write=False)
+        compiled.compile_once(step_kernel, self._row, readable, (0.0,) * MEASURED, np.zeros(self._size))
+        compiled.compile_once(fresh_kernel, np.zeros(self._size), self._rows, 0.0, 0.0, 0.0, 0.0, 0.0)
+
+    @property
+    def speed(self) -> float:
+        """Constant speed, m/s."""
+        return self.settings.cruise
+
+    @property
+    def gain(self) -> float:
+        """Heading gain, 1/s."""
+        return self.settings.gain
+
+    def unchecked(self, **changes: float) -> Controller:
+        """Return a controller with some settings replaced and none checked: for experiments that must be able to fail."""
+        other = object.__new__(Controller)
+        other.platform, other.capture_radius, other.window = self.platform, self.capture_radius, self.window
+        other._set(self.settings._replace(**changes))
+        return other
+
+    def start(self, time: float, motion: tuple[float, float] = (0.0, 0.0)) -> Memory:
+        """Return the memory to begin with at `time` (s), for a robot at rest or already in motion (m/s, rad/s)."""
+        numbers = [float(time), float(motion[0]), float(motion[1])]
+        if not (abs(numbers[0]) <= FAR and abs(numbers[1]) <= FAST and abs(numbers[2]) <= FAST):
+            raise ValueError(f"start(time={time!r}, motion={motion!r}) must be finite; give seconds, m/s and rad/s")
+        row = np.empty(self._size)
+        fresh_kernel(row, self._rows, *numbers, self.settings.period, self.settings.stale_after)  # type: ignore[arg-type]
+        return Memory(row)
+
+    def step(self, memory: Memory, measurement: Measurement) -> Decision:
+        """Return what to do now. Pure; never raises on data.
+
+        Parameters
+        ----------
+        memory : Memory
+            From `start`, or of the last decision.
+        measurement : Measurement
+
+        Returns
+        -------
+        Decision
+            Drive `command`, keep `memory` for the next step; `phase`, `causes` and `report` say why.
+        """
+        try:
+            time, pose, goal, pose_time, frame, speed, turn_rate, limit, hold, applied = measurement
+            x, y, heading = pose
+            goal_x, goal_y = goal
+            applied_v, applied_w = applied
+            measured = FIFTEEN.unpack(
+                FIFTEEN.pack(
+                    time, x, y, heading, pose_time, goal_x, goal_y, frame, speed, turn_rate, limit, hold, applied_v, applied_w, 0.0
+                )
+            )
+        except Exception:  # anything at all may stand in a measurement
+            measured = numbers(measurement)
+        row = memory.row if isinstance(memory, Memory) else None
+        if row is None or row.shape != (self._size,) or row.dtype != np.float64:
+            row = np.full(self._size, NAN)
+        out = np.empty(self._size)
+        if compiled.ON:
+            r = step_kernel(self._row, row, measured, out)  # type: ignore[arg-type]
+        else:
+            kept = [0.0] * self._size
+            r = step_kernel(self._plain, row.tolist(), measured, kept)
+            out[:] = kept
+        return Decision(
+            Command(r[0], r[1], r[2], r[3]),
+            PHASES[int(r[4])],
+            Causes(int(r[5])),
+            Report(r[6], r[7], Pose(r[8], r[9], r[10]), r[11], (r[12], r[13]), Motion(r[14], r[15])),
+            Memory(out),
+        )
+
+    def in_place(self, time: float, motion: tuple[float, float] = (0.0, 0.0)) -> InPlace:
+        """Return the door for fast loops and recorders: one row of floats that `step()` reads and writes."""
+        return InPlace(self, self.start(time, motion))
+
+    def __repr__(self) -> str:
+        return f"Controller(speed={self.speed:.4g} m/s, gain={self.gain:.4g} 1/s, capture_radius={self.capture_radius:.4g} m)"
+
+    def __str__(self) -> str:
+        w = self.window
+        kept = "the fastest workable" if self.speed == w.fastest else f"the fastest workable is {w.fastest:.3g} m/s"
+        lines = [
+            f"Constant speed {self.speed:.3g} m/s ({kept}; bound by {w.reason}).",
+            f"Heading gain {self.gain:.3g} 1/s; those from {w.low:.3g} to {w.high:.3g} 1/s work; turn rate up to {w.ceiling:.3g} rad/s.",
+            "Unguarded: no range sensor; nothing here looks for obstacles.",
+        ]
+        return "\n".join(lines + self.platform.notes())
+
+
+class InPlace:
+    """A row of floats [memory | measurement | result], with named views, stepped in place.
+
+    `measurement` holds, in order: time, x, y, heading, pose_time, goal_x, goal_y, goal_frame, speed, turn_rate, speed_limit, hold,
+    applied speed, applied turn rate, and 0. `result` holds: left, right, speed, turn rate, phase, causes, heading error, distance,
+    x, y, heading, age of the pose, goal x, goal y, wanted speed, wanted turn rate.
+    """
+
+    __slots__ = ("_controller", "measurement", "memory", "result", "row")
+
+    def __init__(self, controller: Controller, memory: Memory) -> None:
+        size = len(memory.row)
+        self._controller = controller
+        self.row = np.full(size + MEASURED + RESULT, NAN)
+        self.memory, self.measurement, self.result = np.split(self.row, [size, size + MEASURED])
+        self.memory[:] = memory.row
+        self.measurement[[7, 11, 14]] = 0.0
+        compiled.compile_once(in_place_kernel, controller._row, self.row, size)
+
+    def step(self) -> Array:
+        """Step once on `measurement`; return `result`."""
+        if compiled.ON:
+            in_place_kernel(self._controller._row, self.row, len(self.memory))  # type: ignore[arg-type]
+        else:
+            kept = self.memory.tolist()
+            self.result[:] = step_kernel(self._controller._plain, kept, self.measurement.tolist(), kept)
+            self.memory[:] = kept
+        return self.result
+
+
+def numbers(measurement: Any) -> tuple[float, ...]:
+    """Return the fifteen numbers of any measurement: missing becomes NaN, what is no number the safer, and is told."""
+    wrong = False
+
+    def one(value: Any, otherwise: float = NAN) -> float:
+        nonlocal wrong
+        if value is None:
+            return NAN
+        try:
+            if isinstance(value, (str, bytes)) or np.size(value) != 1:
+                raise TypeError
+            return float(np.asarray(value).astype(np.float64).item())
+        except Exception:
+            wrong = True
+            return otherwise
+
+    def several(values: Any, count: int) -> list[float]:
+        nonlocal wrong
+        if values is None:
+            return [NAN] * count
+        try:
+            if isinstance(values, (str, bytes)):
+                raise TypeError
+            found = [one(value) for value in values]
+        except Exception:
+            found = []
+        if len(found) != count:
+            wrong = True
+            return [NAN] * count
+        return found
+
+    try:
+        fields = [getattr(measurement, name) for name in Measurement._fields]
+    except Exception:
+        wrong = True
+        fields = [None] * len(Measurement._fields)
+    time, pose, goal, pose_time, frame, speed, turn_rate, limit, hold, applied = fields
+    return (
+        one(time),
+        *several(pose, 3),
+        one(pose_time),
+        *several(goal, 2),
+        one(frame),
+        one(speed),
+        one(turn_rate),
+        one(limit, otherwise=0.0),
+        one(hold, otherwise=1.0),
+        *several(applied, 2),
+        float(wrong),
+    )
+
+
+def checked_radius(platform: Platform, capture_radius: object) -> float:
+    radius = check_above_zero("capture_radius", capture_radius, "m", "give the disc about the goal to come to rest in")
+    least = NOISE_RADII * platform.position_noise
+    if radius < least:
+        raise ValueError(
+            f"capture_radius={shown(radius, 'm')} must be >= {shown(least, 'm')}, eight standard deviations of position_noise; "
+            "widen the disc or measure the pose better"
+        )
+    return radius
+
+
+def checked_speed(platform: Platform, speed: object) -> float | None:
+    if speed is None:
+        return None
+    asked = check_above_zero("speed", speed, "m/s", "give the constant speed, or leave it out for the fastest workable")
+    for name in ("speed_limit", "wheel_speed_limit"):
+        most = getattr(platform, name)
+        if asked > most:
+            raise ValueError(f"speed={shown(asked, 'm/s')} must be <= {name}={shown(most, 'm/s')}; ask for less")
+    return asked
+
+
+def check_window(platform: Platform, found: sizing.Window, speed: float, capture_radius: float) -> None:
+    """Refuse a speed at which no gain works, with the binding reason and the fastest speed at which one does."""
+    if speed * platform.period > sizing.CHORD * capture_radius * (1.0 + 1e-12):
+        raise ValueError(
+            f"capture_radius={shown(capture_radius, 'm')} must be >= speed * period / {sizing.CHORD:g} = "
+            f"{shown(speed * platform.period / sizing.CHORD, 'm')}, for a step must not pass over the disc; "
+            f"widen it, or drive at {shown(found.fastest, 'm/s')} or less"
+        )
+    if speed > found.fastest * (1.0 + 1e-12):
+        raise ValueError(
+            f"speed={shown(speed, 'm/s')}: no gain works, bound by {found.reason}; at {shown(found.fastest, 'm/s')} or less one does"
+        )
+
+
+def checked_gain(
+    platform: Platform, found: sizing.Window, gain: object, integral_time: object, derivative_time: object, predict: bool
+) -> float:
+    chosen = sizing.chosen_gain(platform, found)
+    if gain is not None:
+        chosen = check_above_zero("gain", gain, "1/s", "give turn rate per heading error, or leave it out")
+        if not found.low * (1.0 - 1e-12) <= chosen <= found.high * (1.0 + 1e-12):
+            what = "circles the goal" if chosen < found.low else "swings"
+            raise ValueError(f"gain={shown(chosen, '1/s')} {what}; give {found.low:.6g} to {found.high:.6g} 1/s, or leave it out")
+    if not (isinstance(integral_time, float) and integral_time == math.inf):
+        check_above_zero("integral_time", integral_time, "s", "give the time in which the integral repeats the error; inf for none")
+    check_not_negative("derivative_time", derivative_time, "s", "give the time by which the derivative looks ahead; 0 for none")
+    delay = () if predict else (platform.dead_time, platform.motor_lag)
+    size = sizing.slowest_root(chosen, float(integral_time), float(derivative_time), platform.period, *delay)  # type: ignore[arg-type]
+    if size >= 1.0:
+        raise ValueError(
+            f"gain={shown(chosen, '1/s')} with integral_time={shown(integral_time, 's')} and "
+            f"derivative_time={shown(derivative_time, 's')} swings for ever; lengthen the first or shorten the second"
+        )
+    return chosen
+
+
+def checked_age(platform: Platform, stale_after: object) -> float:
+    if stale_after is None:
+        return platform.dead_time + 3.0 * platform.period
+    age = check_above_zero("stale_after", stale_after, "s", "give the age at which a pose is too old")
+    if age < platform.period:
+        raise ValueError(f"stale_after={shown(age, 's')} must be >= period={shown(platform.period, 's')}; a fresh pose must count")
+    if age > 10.0:
+        raise ValueError(f"stale_after={shown(age, 's')} must be <= 10 s; a pose that old says nothing")
+    return age
+

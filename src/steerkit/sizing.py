@@ -1,0 +1,237 @@
+"""Sizing: which heading gains work for a robot, and the fastest constant speed at which one does.
+
+The heading loop is turn_rate = clip(gain * error, +-ceiling). A gain works at a speed when it is high enough not to circle the goal
+outside its capture disc, and low enough not to swing. SI units; gains in 1/s. Derived, unless a source is given.
+
+Dead time is counted in periods: delay = d + m, d whole, 0 <= m < 1. The command of step k-d-1 acts for m periods more, then that of
+step k-d. With prediction the loop sees its error where the command takes effect, and behaves as if there were no delay and no lag.
+"""
+
+from __future__ import annotations
+
+import math
+from typing import NamedTuple
+
+import numpy as np
+from numpy.typing import NDArray
+
+from steerkit.limits import held_stop_kernel
+from steerkit.platforms import Platform
+
+Array = NDArray[np.float64]
+
+CAPTURE_MARGIN = 1.1  # the orbit is kept this much smaller than the capture disc
+CHORD = 0.8  # a step at constant speed is at most this share of the capture radius, so that no disc is stepped over
+NOISE_SHARE = 0.1  # heading noise may move the turn rate by this share of its ceiling (standard deviation); chosen
+SHORT_LAG = 1e-4  # periods; a lag below this is none
+
+
+class Window(NamedTuple):
+    """The gains that work at one constant speed, and the fastest speed at which any does.
+
+    `low`, `high` 1/s; `ceiling` rad/s, the most that the heading law asks for; `margin`, orbit to capture disc;
+    `fastest` m/s; `reason`, what keeps it from being faster.
+    """
+
+    low: float
+    high: float
+    ceiling: float
+    margin: float
+    fastest: float
+    reason: str
+
+
+def split_delay(dead_time: float, period: float) -> tuple[int, float]:
+    """Return the dead time as whole periods and the fraction of one, (d, m)."""
+    whole = math.floor(dead_time / period + 1e-12)
+    return whole, max(0.0, dead_time / period - whole)
+
+
+def no_overshoot_gain(period: float, dead_time: float = 0.0, motor_lag: float = 0.0) -> float:
+    """Return the highest proportional gain (1/s) at which the heading error does not change its sign.
+
+    For the loop without prediction; with it, use dead_time = motor_lag = 0. m = 0 is Erbe & Zhang 1989 (from memory).
+    """
+    d, m = split_delay(dead_time, period)
+    if motor_lag > SHORT_LAG * period:
+        return lagged_no_overshoot(d, m, motor_lag / period) / period
+    if m == 0.0:
+        return d**d / (d + 1.0) ** (d + 1) / period
+    q, n = 1.0 - m, d + 1.0
+    b = n * (1.0 - 2.0 * m) - 1.0
+    s = math.sqrt(b * b + 4.0 * n * n * q * m)
+    z = (b + s) / (2.0 * n * q) if b >= 0.0 else 2.0 * n * m / (s - b)
+    return z ** (d + 1) * (1.0 - z) / (q * z + m) / period
+
+
+def stable_gain(period: float, dead_time: float = 0.0, motor_lag: float = 0.0) -> float:
+    """Return the proportional gain (1/s) below which the heading loop is stable.
+
+    For the loop without prediction; with it, use dead_time = motor_lag = 0. m = 0 is Levin & May 1976 (from memory).
+    """
+    d, m = split_delay(dead_time, period)
+    if motor_lag > SHORT_LAG * period:
+        return lagged_stable(d, m, motor_lag / period) / period
+    q = 1.0 - m
+    if d == 0:
+        return min(1.0 / m if m > 0.0 else math.inf, 2.0 / (1.0 - 2.0 * m) if m < 0.5 else math.inf) / period
+    low, high = math.pi / (2 * d + 3), math.pi / (2 * d + 1)
+    for _ in range(60):
+        angle = 0.5 * (low + high)
+        phase = (d + 1.5) * angle - math.pi / 2.0 - math.atan2(q * math.sin(angle), q * math.cos(angle) + m)
+        low, high = (angle, high) if phase < 0.0 else (low, angle)
+    return 2.0 * math.sin(angle / 2.0) / math.hypot(q * math.cos(angle) + m, q * math.sin(angle)) / period
+
+
+def lagged_loop(d: int, m: float, mu: float) -> tuple[Array, Array]:
+    """Return the open loop behind a lag of `mu` periods as polynomials in z, (denominator, numerator), highest power first.
+
+    z^(d+1) (z-1)(z-p) and (q z + m)(z-p) - mu (c0 z + c1)(z-1); the closed loop is denominator + gain*period * numerator.
+    """
+    q, p = 1.0 - m, math.exp(-1.0 / mu) if mu > 0.0 else 0.0
+    c0 = -math.expm1(-q / mu) if mu > 0.0 else 1.0
+    c1 = 1.0 - p - c0
+    numerator = np.polymul([q, m], [1.0, -p]) - mu * np.polymul([c0, c1], [1.0, -1.0])
+    return np.concatenate([np.polymul([1.0, -1.0], [1.0, -p]), np.zeros(d + 1)]), numerator
+
+
+def lagged_no_overshoot(d: int, m: float, mu: float) -> float:
+    """Return max of z^(d+1) (1-z)(z-p)/N on p < z < 1: the largest gain*period that keeps a positive real root."""
+    denominator, numerator = lagged_loop(d, m, mu)
+    p = math.exp(-1.0 / mu)
+
+    def gain(z: float) -> float:
+        return float(-np.polyval(denominator, z) / np.polyval(numerator, z))
+
+    low, high = p, 1.0
+    golden = (math.sqrt(5.0) - 1.0) / 2.0
+    for _ in range(90):
+        left, right = high - golden * (high - low), low + golden * (high - low)
+        low, high = (low, right) if gain(left) > gain(right) else (left, high)
+    return gain(0.5 * (low + high))
+
+
+def lagged_stable(d: int, m: float, mu: float) -> float:
+    """Return the least gain*period at which a root of the loop crosses the unit circle."""
+    denominator, numerator = lagged_loop(d, m, mu)
+
+    def loop(angle: Array) -> NDArray[np.complex128]:
+        z = np.exp(1j * angle)
+        return np.asarray(np.polyval(numerator, z) / np.polyval(denominator, z))
+
+    grid = np.linspace(1e-6, math.pi, 400 * (d + 3))
+    side = loop(grid).imag
+    crossings = np.flatnonzero(side[:-1] * side[1:] < 0.0)
+    low, high = grid[crossings], grid[crossings + 1]
+    for _ in range(60):
+        middle = 0.5 * (low + high)
+        same = np.sign(loop(middle).imag) == np.sign(loop(low).imag)
+        low, high = np.where(same, middle, low), np.where(same, high, middle)
+    crossed = np.append(loop(0.5 * (low + high)).real, loop(np.array([math.pi])).real)
+    return float(np.min(-1.0 / crossed[crossed < 0.0]))
+
+
+def slowest_root(
+    gain: float, integral_time: float, derivative_time: float, period: float, dead_time: float = 0.0, motor_lag: float = 0.0
+) -> float:
+    """Return the size of the largest root of the heading loop with P, PI or PID (below 1: stable; 1 is the border).
+
+    The controller is gain (1 + T/(Ti) z/(z-1) + Td/T (z-1)/z), T the period. Used to refuse gains that swing for ever.
+    """
+    d, m = split_delay(dead_time, period)
+    denominator, numerator = lagged_loop(d, m, motor_lag / period if motor_lag > SHORT_LAG * period else 0.0)
+    share = period / integral_time
+    control = np.polyadd(np.polyadd([1.0, -1.0, 0.0], [share, 0.0, 0.0]), derivative_time / period * np.array([1.0, -2.0, 1.0]))
+    closed = np.polyadd(np.polymul(denominator, [1.0, -1.0, 0.0]), gain * period * np.polymul(numerator, control))
+    if share == 0.0:
+        closed = np.polydiv(closed, [1.0, -1.0])[0]
+    return float(np.max(np.abs(np.roots(closed))))
+
+
+def orbit_radius(speed: float, gain: float, ceiling: float = math.inf) -> float:
+    """Return the radius (m) of the circle about the goal that a constant speed and a gain end in.
+
+    speed / min(ceiling, pi gain/2): on the circle the heading error is a right angle. Dead time leaves it as it is.
+    """
+    return speed / min(ceiling, math.pi * gain / 2.0)
+
+
+def no_ringing_gain(platform: Platform, ceiling: float, predict: bool) -> float:
+    """Return the highest gain (1/s) that does not swing, the turn acceleration counted.
+
+    With prediction, T the period: the turn rate falls by al*T a step at most, from the ceiling O, and must not carry past the goal
+    heading: 1/gain >= T + X(O - al T)/O, X the path of a held stop. Without: gain <= al/O.
+    """
+    step = platform.turn_acceleration * platform.period
+    if not predict:
+        return min(
+            no_overshoot_gain(platform.period, platform.dead_time, platform.motor_lag),
+            platform.turn_acceleration / ceiling,
+        )
+    carried = held_stop_kernel(max(0.0, ceiling - step), platform.turn_acceleration, platform.period)
+    return 1.0 / (platform.period + carried / ceiling)
+
+
+def best_ceiling(platform: Platform, predict: bool) -> float:
+    """Return the turn-rate ceiling (rad/s) that allows the highest constant speed: a lower ceiling allows a higher gain."""
+
+    def useful(ceiling: float) -> bool:
+        return ceiling <= math.pi / 2.0 * no_ringing_gain(platform, ceiling, predict)
+
+    high = platform.top_turn_rate
+    if useful(high):
+        return high
+    low = 0.0
+    for _ in range(60):
+        middle = 0.5 * (low + high)
+        low, high = (middle, high) if useful(middle) else (low, middle)
+    return low
+
+
+def shallow_depth(capture_radius: float, position_noise: float) -> float:
+    """Return how deep inside the disc a stop is aimed, as a share of its radius: four standard deviations, 0.1 to 0.5."""
+    return min(0.5, max(0.1, 4.0 * position_noise / capture_radius))
+
+
+def window(platform: Platform, capture_radius: float, speed: float | None = None, predict: bool = True) -> Window:
+    """Return the gains that work at a constant speed (m/s), or at the fastest one that has any.
+
+    `low`: on the final circle about the goal the disc is still reached, gain >= margin * 2 v/(pi r). `high`: no swinging. The
+    window is empty (low > high) above `fastest`.
+
+    Parameters
+    ----------
+    platform : Platform
+    capture_radius : float, m
+    speed : float, m/s, or None for the fastest workable
+    predict : bool
+        Whether the heading loop sees its error where the command takes effect.
+
+    Returns
+    -------
+    Window
+    """
+    margin = CAPTURE_MARGIN * 0.95 / (1.0 - shallow_depth(capture_radius, platform.position_noise) / 2.0)
+    ceiling = best_ceiling(platform, predict)
+    reach = capture_radius / margin
+    turned = "turn_rate_limit" if platform.turn_rate_limit <= platform.top_turn_rate else "wheel_speed_limit on the spot"
+    if ceiling < platform.top_turn_rate:
+        swinging = no_overshoot_gain(platform.period, platform.dead_time, platform.motor_lag) if not predict else 1.0 / platform.period
+        limited = ceiling * 2.0 / math.pi >= 0.999 * swinging
+        turned = ("period" if predict else "period, dead_time and motor_lag") if limited else "turn_acceleration"
+    bounds = {
+        f"{turned}: turning at {ceiling:.3g} rad/s, it must still reach a disc of {capture_radius:.3g} m": reach * ceiling,
+        f"period: a step may cover {CHORD:g} of the capture radius": CHORD * capture_radius / platform.period,
+        "speed_limit": platform.speed_limit,
+        "wheel_speed_limit": platform.wheel_speed_limit,
+    }
+    reason = min(bounds, key=lambda name: bounds[name])
+    asked = bounds[reason] if speed is None else speed
+    low = margin * 2.0 * asked / (math.pi * capture_radius)
+    return Window(low, no_ringing_gain(platform, ceiling, predict), ceiling, margin, bounds[reason], reason)
+
+
+def chosen_gain(platform: Platform, found: Window) -> float:
+    """Return the gain to drive with (1/s): the highest of the window, lower where the heading noise asks for it."""
+    quiet = NOISE_SHARE * found.ceiling / platform.heading_noise if platform.heading_noise > 0.0 else math.inf
+    return max(min(found.low, found.high), min(found.high, quiet))
