@@ -11,7 +11,7 @@ from steerkit.controller import Controller
 from steerkit.kinematics import arc_kernel
 from steerkit.step import HEAD, step_kernel
 
-COLUMNS = ("x", "y", "heading", "speed", "turn_rate", "phase", "causes", "heading_error", "nearest", "wheels")
+COLUMNS = ("x", "y", "heading", "speed", "turn_rate", "phase", "causes", "heading_error", "nearest", "wheels", "wanted")
 CAPTURED, ARRIVED = 1, 2  # when to end early
 
 
@@ -55,6 +55,7 @@ def drive_kernel(settings, memory, dead_time, lag, start, motion, goal, steps, u
             x, y, heading, v, w, sent[k + 1, 0], sent[k + 1, 1], (1.0 - m) * period, lag, goal[0], goal[1], near
         )
         log[k, 8], log[k, 9] = near, abs(v) + abs(w) * half_track
+        log[k, 10] = r[14]
         if (until == 1 and near <= radius) or (until == 2 and r[4] == 1.0):
             return k + 1
     return steps

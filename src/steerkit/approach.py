@@ -2,8 +2,8 @@
 
 The robot heads for the goal, the short way round, at its cruising speed. It brakes when
 
-- the stop along its present curve ends inside the disc (so a robot that circles inside the disc stops on its circle), or
-- the goal lies ahead, and the held speed must come down to end at the near edge of a smaller disc about it.
+- the goal lies ahead: steering on, so that the held speed ends at the near edge of a smaller disc about the goal; or
+- the stop along its present curve ends inside the disc: a robot that circles inside the disc stops on its circle.
 
 Off to the side of the goal it does not brake: a speed and a gain outside the window of `sizing` circle the goal for ever.
 Everything counts from the pose at which the new command takes effect, coasted (`prediction`). Metres, seconds, radians; derived.
@@ -65,12 +65,16 @@ def constant_speed_kernel(
     `capture_radius`; at rest anywhere within `capture_radius` the robot stays.
     """
     distance, bearing = bearing_kernel(x, y, goal_x, goal_y)
-    path = held_stop_kernel(max(0.0, v0 - braking * period), braking, period)
+    if v0 == 0.0 and distance <= capture_radius:
+        return bearing, distance, 0.0, True
+    slower = max(0.0, v0 - braking * period)
+    way = way_ahead_kernel(distance, difference_kernel(bearing, heading), aim_radius)
+    speed = cruise if way == math.inf else held_speed_kernel(way, braking, period, cruise)
+    path = held_stop_kernel(slower, braking, period)
+    if 0.0 < way < math.inf and path <= way + aim_radius:
+        return bearing, distance, speed, False
     end_x, end_y = stop_end_kernel(x, y, heading, v0, w0, braking, turn_acceleration, period, path)
     short, _ = bearing_kernel(end_x, end_y, goal_x, goal_y)
-    if short <= (capture_radius if stopping or v0 == 0.0 else stop_radius):
+    if short <= (capture_radius if stopping else stop_radius):
         return bearing, distance, 0.0, True
-    way = way_ahead_kernel(distance, difference_kernel(bearing, heading), aim_radius)
-    if way == math.inf:
-        return bearing, distance, cruise, False
-    return bearing, distance, held_speed_kernel(way, braking, period, cruise), False
+    return bearing, distance, speed, False

@@ -82,7 +82,7 @@ class Controller:
         self.window = sizing.window(platform, self.capture_radius, checked_speed(platform, speed), bool(predict))
         cruise = self.window.fastest if speed is None else float(speed)
         check_window(platform, self.window, cruise, self.capture_radius)
-        depth = sizing.shallow_depth(self.capture_radius, platform.position_noise)
+        depth = sizing.stop_depth(self.capture_radius, platform.position_noise)
         self._set(
             Settings(
                 period=platform.period,
@@ -206,7 +206,7 @@ class Controller:
         w = self.window
         kept = "the fastest workable" if self.speed == w.fastest else f"the fastest workable is {w.fastest:.3g} m/s"
         lines = [
-            f"Constant speed {self.speed:.3g} m/s ({kept}; bound by {w.reason}).",
+            f"Constant speed {self.speed:.3g} m/s ({kept}; bound by {w.bound}).",
             f"Heading gain {self.gain:.3g} 1/s; those from {w.low:.3g} to {w.high:.3g} 1/s work; turn rate up to {w.ceiling:.3g} rad/s.",
             "Unguarded: no range sensor; nothing here looks for obstacles.",
         ]
@@ -327,7 +327,7 @@ def check_window(platform: Platform, found: sizing.Window, speed: float, capture
         )
     if speed > found.fastest * (1.0 + 1e-12):
         raise ValueError(
-            f"speed={shown(speed, 'm/s')}: no gain works, bound by {found.reason}; at {shown(found.fastest, 'm/s')} or less one does"
+            f"speed={shown(speed, 'm/s')}: no gain works, bound by {found.bound}; at {shown(found.fastest, 'm/s')} or less one does"
         )
 
 

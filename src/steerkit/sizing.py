@@ -10,6 +10,7 @@ step k-d. With prediction the loop sees its error where the command takes effect
 from __future__ import annotations
 
 import math
+from collections.abc import Callable
 from typing import NamedTuple
 
 import numpy as np
@@ -22,6 +23,7 @@ Array = NDArray[np.float64]
 
 CAPTURE_MARGIN = 1.1  # the orbit is kept this much smaller than the capture disc
 CHORD = 0.8  # a step at constant speed is at most this share of the capture radius, so that no disc is stepped over
+SHARES = 64  # turn rates at which swinging is judged, up to the ceiling
 NOISE_SHARE = 0.1  # heading noise may move the turn rate by this share of its ceiling (standard deviation); chosen
 SHORT_LAG = 1e-4  # periods; a lag below this is none
 
@@ -30,7 +32,7 @@ class Window(NamedTuple):
     """The gains that work at one constant speed, and the fastest speed at which any does.
 
     `low`, `high` 1/s; `ceiling` rad/s, the most that the heading law asks for; `margin`, orbit to capture disc;
-    `fastest` m/s; `reason`, what keeps it from being faster.
+    `fastest` m/s; `bound`, the number of the platform that keeps it from being faster.
     """
 
     low: float
@@ -38,7 +40,7 @@ class Window(NamedTuple):
     ceiling: float
     margin: float
     fastest: float
-    reason: str
+    bound: str
 
 
 def split_delay(dead_time: float, period: float) -> tuple[int, float]:
@@ -156,39 +158,44 @@ def orbit_radius(speed: float, gain: float, ceiling: float = math.inf) -> float:
     return speed / min(ceiling, math.pi * gain / 2.0)
 
 
-def no_ringing_gain(platform: Platform, ceiling: float, predict: bool) -> float:
-    """Return the highest gain (1/s) that does not swing, the turn acceleration counted.
+def no_ringing_gain(platform: Platform, speed: float, ceiling: float, predict: bool = True) -> float:
+    """Return the highest gain (1/s) at which the heading does not swing at a constant speed, the turn acceleration counted.
 
-    With prediction, T the period: the turn rate falls by al*T a step at most, from the ceiling O, and must not carry past the goal
-    heading: 1/gain >= T + X(O - al T)/O, X the path of a held stop. Without: gain <= al/O.
+    With prediction, T the period: from any turn rate w up to what the wheels leave of the ceiling, the fall by al T a step must
+    not carry past the goal heading: e >= T w + X(w - al T), X the path of a held stop. e is asked/gain, and the wheels shrink what
+    is asked to w along the curve. Without prediction: no overshoot of the linear loop, and gain <= al/w.
     """
-    step = platform.turn_acceleration * platform.period
+    asked = np.linspace(ceiling / SHARES, ceiling, SHARES)
+    given = asked * np.minimum(1.0, platform.wheel_speed_limit / (speed + asked * platform.track_width / 2.0))
+    al, period = platform.turn_acceleration, platform.period
     if not predict:
-        return min(
-            no_overshoot_gain(platform.period, platform.dead_time, platform.motor_lag),
-            platform.turn_acceleration / ceiling,
-        )
-    carried = held_stop_kernel(max(0.0, ceiling - step), platform.turn_acceleration, platform.period)
-    return 1.0 / (platform.period + carried / ceiling)
+        linear = no_overshoot_gain(period, platform.dead_time, platform.motor_lag)
+        return min(linear, al / float(np.max(given)))
+    carried = np.array([held_stop_kernel(max(0.0, w - al * period), al, period) for w in given.tolist()])
+    return float(1.0 / max(period, np.max((period * given + carried) / asked)))
 
 
-def best_ceiling(platform: Platform, predict: bool) -> float:
-    """Return the turn-rate ceiling (rad/s) that allows the highest constant speed: a lower ceiling allows a higher gain."""
+def best_ceiling(platform: Platform, speed: float, predict: bool) -> float:
+    """Return the turn-rate ceiling (rad/s) with the smallest orbit at a speed: a lower ceiling allows a higher gain."""
 
-    def useful(ceiling: float) -> bool:
-        return ceiling <= math.pi / 2.0 * no_ringing_gain(platform, ceiling, predict)
+    def too_high(ceiling: float) -> bool:
+        return ceiling > math.pi / 2.0 * no_ringing_gain(platform, speed, ceiling, predict)
 
-    high = platform.top_turn_rate
-    if useful(high):
-        return high
-    low = 0.0
+    return bisected(too_high, platform.turn_rate_limit)
+
+
+def bisected(fails: Callable[[float], bool], most: float) -> float:
+    """Return the largest value up to `most` that does not fail, for a test that fails from some value on."""
+    if not fails(most):
+        return most
+    low, high = 0.0, most
     for _ in range(60):
         middle = 0.5 * (low + high)
-        low, high = (middle, high) if useful(middle) else (low, middle)
+        low, high = (low, middle) if fails(middle) else (middle, high)
     return low
 
 
-def shallow_depth(capture_radius: float, position_noise: float) -> float:
+def stop_depth(capture_radius: float, position_noise: float) -> float:
     """Return how deep inside the disc a stop is aimed, as a share of its radius: four standard deviations, 0.1 to 0.5."""
     return min(0.5, max(0.1, 4.0 * position_noise / capture_radius))
 
@@ -211,24 +218,38 @@ def window(platform: Platform, capture_radius: float, speed: float | None = None
     -------
     Window
     """
-    margin = CAPTURE_MARGIN * 0.95 / (1.0 - shallow_depth(capture_radius, platform.position_noise) / 2.0)
-    ceiling = best_ceiling(platform, predict)
+    margin = CAPTURE_MARGIN * 0.95 / (1.0 - stop_depth(capture_radius, platform.position_noise) / 2.0)
     reach = capture_radius / margin
-    turned = "turn_rate_limit" if platform.turn_rate_limit <= platform.top_turn_rate else "wheel_speed_limit on the spot"
-    if ceiling < platform.top_turn_rate:
-        swinging = no_overshoot_gain(platform.period, platform.dead_time, platform.motor_lag) if not predict else 1.0 / platform.period
-        limited = ceiling * 2.0 / math.pi >= 0.999 * swinging
-        turned = ("period" if predict else "period, dead_time and motor_lag") if limited else "turn_acceleration"
-    bounds = {
-        f"{turned}: turning at {ceiling:.3g} rad/s, it must still reach a disc of {capture_radius:.3g} m": reach * ceiling,
-        f"period: a step may cover {CHORD:g} of the capture radius": CHORD * capture_radius / platform.period,
+
+    def circles(v: float) -> bool:
+        return v > reach * math.pi / 2.0 * no_ringing_gain(platform, v, v / reach, predict)
+
+    most = {
         "speed_limit": platform.speed_limit,
         "wheel_speed_limit": platform.wheel_speed_limit,
+        "period": CHORD * capture_radius / platform.period,
+        "turn_rate_limit": reach * platform.turn_rate_limit,
     }
-    reason = min(bounds, key=lambda name: bounds[name])
-    asked = bounds[reason] if speed is None else speed
+    bound = min(most, key=lambda name: most[name])
+    fastest = bisected(circles, most[bound])
+    if fastest < most[bound]:
+        bound = swing_reason(platform, fastest / reach, predict)
+    asked = fastest if speed is None else speed
+    ceiling = best_ceiling(platform, asked, predict)
     low = margin * 2.0 * asked / (math.pi * capture_radius)
-    return Window(low, no_ringing_gain(platform, ceiling, predict), ceiling, margin, bounds[reason], reason)
+    high = no_ringing_gain(platform, asked, ceiling, predict)
+    return Window(min(low, high) if speed is None else low, high, ceiling, margin, fastest, bound)
+
+
+def swing_reason(platform: Platform, turn_rate: float, predict: bool) -> str:
+    """Return which number keeps the gain from being high enough to turn at `turn_rate` (rad/s) without swinging."""
+    gain = turn_rate * 2.0 / math.pi
+    if predict:
+        return "period" if gain > 0.99 / platform.period else "turn_acceleration"
+    linear = no_overshoot_gain(platform.period, platform.dead_time, platform.motor_lag)
+    if gain < 0.99 * linear:
+        return "turn_acceleration"
+    return "dead_time and motor_lag" if platform.dead_time + platform.motor_lag > platform.period else "period"
 
 
 def chosen_gain(platform: Platform, found: Window) -> float:
