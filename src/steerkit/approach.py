@@ -18,6 +18,7 @@ from steerkit.compiled import kernel
 from steerkit.limits import held_speed_kernel, held_stop_kernel
 from steerkit.prediction import stop_end_kernel
 
+NEAR = 1e-3  # of the capture radius: a way shorter than this is not worth driving
 AHEAD = 0.5  # rad; a goal this close to the heading is driven at: the heading loop takes out the rest on the way
 
 
@@ -71,7 +72,7 @@ def constant_speed_kernel(
     way = way_ahead_kernel(distance, difference_kernel(bearing, heading), aim_radius)
     speed = cruise if way == math.inf else held_speed_kernel(way, braking, period, cruise)
     path = held_stop_kernel(slower, braking, period)
-    if 0.0 < way < math.inf and path <= way + aim_radius:
+    if NEAR * capture_radius < way < math.inf and path <= way + aim_radius:
         return bearing, distance, speed, False
     end_x, end_y = stop_end_kernel(x, y, heading, v0, w0, braking, turn_acceleration, period, path)
     short, _ = bearing_kernel(end_x, end_y, goal_x, goal_y)

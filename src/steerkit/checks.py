@@ -15,6 +15,12 @@ def shown(value: object, unit: str = "") -> str:
     return f"{text} {unit}".rstrip()
 
 
+def rounded_down(value: float, digits: int = 4) -> float:
+    """Return a positive number cut to some digits, so that what a sentence proposes can be asked for."""
+    unit = 10.0 ** (math.floor(math.log10(value)) - digits + 1)
+    return float(f"{math.floor(value / unit) * unit:.{digits}g}")
+
+
 def check_number(name: str, value: object, unit: str, repair: str) -> float:
     """Return `value` as a finite float."""
     if isinstance(value, bool) or not isinstance(value, numbers.Real):

@@ -14,7 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from steerkit import compiled, sizing
-from steerkit.checks import check_above_zero, check_not_negative, shown
+from steerkit.checks import check_above_zero, check_not_negative, rounded_down, shown
 from steerkit.platforms import Platform
 from steerkit.signals import HEAD, Causes, Command, Decision, Measurement, Memory, Motion, Phase, Pose, Report
 from steerkit.step import FAR, FAST, MEASURED, RESULT, Settings, fresh_kernel, in_place_kernel, step_kernel
@@ -319,15 +319,16 @@ def checked_speed(platform: Platform, speed: object) -> float | None:
 
 def check_window(platform: Platform, found: sizing.Window, speed: float, capture_radius: float) -> None:
     """Refuse a speed at which no gain works, with the binding reason and the fastest speed at which one does."""
+    workable = shown(rounded_down(found.fastest), "m/s")
     if speed * platform.period > sizing.CHORD * capture_radius * (1.0 + 1e-12):
         raise ValueError(
             f"capture_radius={shown(capture_radius, 'm')} must be >= speed * period / {sizing.CHORD:g} = "
             f"{shown(speed * platform.period / sizing.CHORD, 'm')}, for a step must not pass over the disc; "
-            f"widen it, or drive at {shown(found.fastest, 'm/s')} or less"
+            f"widen it, or drive at {workable} or less"
         )
     if speed > found.fastest * (1.0 + 1e-12):
         raise ValueError(
-            f"speed={shown(speed, 'm/s')}: no gain works, bound by {found.bound}; at {shown(found.fastest, 'm/s')} or less one does"
+            f"speed={shown(speed, 'm/s')}: no gain works, bound by {found.bound}; at {workable} or less one does"
         )
 
 

@@ -70,6 +70,7 @@ TOLD_TO_HOLD, BAD_POSE, STALE_POSE = int(Causes.TOLD_TO_HOLD), int(Causes.BAD_PO
 POSE_JUMPED, BAD_GOAL, BAD_CLOCK = int(Causes.POSE_JUMPED), int(Causes.BAD_GOAL), int(Causes.BAD_CLOCK)
 BAD_FIELD, BAD_MEMORY, OTHERS = int(Causes.BAD_FIELD), int(Causes.BAD_MEMORY), int(Causes.APPLIED_BY_OTHERS)
 ROBOT = float(Frame.ROBOT)
+PI = math.pi
 
 
 @kernel
@@ -283,6 +284,10 @@ def step_kernel(settings: Sequence[float], memory: Sequence[float], measured: Se
             then_heading = heading
             bearing = bearing_kernel(x, y, goal_x, goal_y)[1]
         error = difference_kernel(bearing, then_heading)
+        # With the goal behind, noise must not make the robot change its mind: within the noise of half a turn, it turns on.
+        blur = 6.0 * (heading_noise + position_noise / max(distance, capture_radius))
+        if abs(error) > PI - min(blur, 0.5) and error * last_w < 0.0:
+            error -= math.copysign(2.0 * PI, error)
         rate = heading_rate_kernel(then_heading, before, since)
         before = then_heading
         if (arrived and distance <= stay_radius) or wanted_v == 0.0:
