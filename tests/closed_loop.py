@@ -50,7 +50,9 @@ def drive_kernel(settings, memory, dead_time, lag, start, motion, goal, steps, u
         log[k, 0], log[k, 1], log[k, 2], log[k, 3], log[k, 4] = x, y, heading, r[2], r[3]
         log[k, 5], log[k, 6], log[k, 7] = r[4], r[5], r[6]
         near = math.inf
-        x, y, heading, v, w, near = plant_kernel(x, y, heading, v, w, sent[k, 0], sent[k, 1], m * period, lag, goal[0], goal[1], near)
+        x, y, heading, v, w, near = plant_kernel(
+            x, y, heading, v, w, sent[k, 0], sent[k, 1], m * period, lag, goal[0], goal[1], near
+        )
         x, y, heading, v, w, near = plant_kernel(
             x, y, heading, v, w, sent[k + 1, 0], sent[k + 1, 1], (1.0 - m) * period, lag, goal[0], goal[1], near
         )

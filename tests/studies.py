@@ -1,4 +1,4 @@
-"""Studies over random robots, shared by the tests (few draws) and by `python tests/studies.py` (the figures of the release notes)."""
+"""Studies over random robots: few draws in the tests, many with `python tests/studies.py --robots 2000`."""
 
 from __future__ import annotations
 
@@ -9,9 +9,9 @@ from collections import Counter
 from typing import NamedTuple
 
 import numpy as np
+
 from closed_loop import ARRIVED, CAPTURED, drive
 from robots import Robot, draw, draw_start
-
 from steerkit import Controller, Platform, sizing
 
 FREE = 1e9  # a limit that never binds
@@ -119,7 +119,13 @@ def orbit_errors(robots: int, seed: int) -> list[float]:
 def allowed(robot: Robot, controller: Controller, distance: float) -> int:
     """Return steps enough for any drive that works: three times the way, and ten turns, ramps and periods more."""
     s = controller.settings
-    span = 3.0 * distance / s.cruise + 20.0 * math.pi / s.ceiling + 20.0 * s.cruise / s.acceleration + 20.0 * s.top_speed / s.braking + 10.0
+    span = (
+        3.0 * distance / s.cruise
+        + 20.0 * math.pi / s.ceiling
+        + 20.0 * s.cruise / s.acceleration
+        + 20.0 * s.top_speed / s.braking
+        + 10.0
+    )
     return math.ceil(span / s.period)
 
 

@@ -28,6 +28,7 @@ TURN_ERROR = 2.45e-16  # 2 pi minus its nearest float, to 3 digits
 DOWN, UP = math.nextafter(PI, 0.0), math.nextafter(PI, 4.0)
 FINITE = st.floats(allow_nan=False, allow_infinity=False)
 DRIVEN = st.floats(-1e4, 1e4)  # headings that a robot may have counted up
+PATIENT = settings(deadline=None)  # the first call of a kernel compiles it
 NEEDS_COMPILER = pytest.mark.skipif(not compiled.ON, reason="without the compiler the kernels are plain Python already")
 
 
@@ -143,6 +144,7 @@ def test_wrap_is_exact_at_the_cut_and_keeps_tiny_angles(angle, expected):
     assert same_bits(wrap([angle]), [expected])
 
 
+@PATIENT
 @given(st.floats(-DOWN, PI))
 def test_wrap_leaves_an_angle_inside_the_interval_alone(angle):
     assert same_bits(wrap(angle), angle)
@@ -157,6 +159,7 @@ def test_wrap_of_no_number_is_nan(angle):
     assert abs(got[2] - (7.0 - TURN)) <= 2 * ULP
 
 
+@PATIENT
 @given(FINITE)
 def test_wrap_stays_in_its_interval_and_is_idempotent(angle):
     got = wrap(angle)
@@ -164,12 +167,14 @@ def test_wrap_stays_in_its_interval_and_is_idempotent(angle):
     assert same_bits(wrap(got), got)
 
 
+@PATIENT
 @given(FINITE)
 def test_wrap_is_odd_off_the_cut(angle):
     got = wrap(angle)
     assert same_bits(wrap(-angle), -got if got != PI else PI)
 
 
+@PATIENT
 @given(FINITE)
 def test_wrap_keeps_the_direction(angle):
     got = wrap(angle)
@@ -223,6 +228,7 @@ def test_wrap_of_a_single_number_is_a_float(angle):
     assert abs(got - (7.0 - TURN)) <= 2 * ULP
 
 
+@PATIENT
 @given(arrays(np.float64, array_shapes(min_dims=1, max_dims=4, min_side=0, max_side=4), elements=st.floats(-1e9, 1e9)))
 def test_wrap_of_an_array_is_the_wrap_of_each(angles):
     assert same_bits(wrap(angles), np.array([wrap(x) for x in angles.ravel().tolist()]))
@@ -249,6 +255,7 @@ def test_difference_takes_the_short_way_round(target, origin, expected):
     assert abs(got - math.radians(expected)) <= 8 * ULP  # radians of 725 degrees are rounded to 4 of these
 
 
+@PATIENT
 @given(DRIVEN, DRIVEN)
 def test_difference_carries_the_origin_to_the_target(target, origin):
     got = difference(target, origin)
@@ -258,6 +265,7 @@ def test_difference_carries_the_origin_to_the_target(target, origin):
     assert abs(lands - expected) <= 2 * math.ulp(2e4) + 4 * ULP  # the subtraction and the addition, each rounded once
 
 
+@PATIENT
 @given(DRIVEN, DRIVEN)
 def test_difference_changes_sign_with_its_arguments_off_the_cut(target, origin):
     got = difference(target, origin)
@@ -334,6 +342,7 @@ def test_unwrap_leaves_a_step_of_exactly_half_a_turn(angles):
     assert unwrap(angles).tolist() == angles == np.unwrap(angles).tolist()
 
 
+@PATIENT
 @given(st.lists(st.floats(-100.0, 100.0), min_size=1, max_size=30))
 def test_unwrap_makes_no_step_over_half_a_turn_and_keeps_every_direction(angles):
     got = unwrap(angles)
@@ -345,6 +354,7 @@ def test_unwrap_makes_no_step_over_half_a_turn_and_keeps_every_direction(angles)
     assert got[0] == angles[0]
 
 
+@PATIENT
 @given(st.lists(st.floats(-3.14, 3.14), min_size=1, max_size=30), DRIVEN)
 def test_unwrap_gives_back_the_steps_of_a_drive(steps, start):
     driven = start + np.cumsum(steps)
@@ -480,6 +490,7 @@ def test_whole_weights_count_a_sample_that_often():
     assert apart(got.direction, expected) * got.resultant <= 30 * 2.3e-16
 
 
+@PATIENT
 @given(st.floats(-PI, PI), st.floats(-1.5, 1.5))
 def test_mean_of_two_is_their_middle_and_the_cosine_of_half_their_angle(middle, half):
     got = mean([middle - half, middle + half])
@@ -487,6 +498,7 @@ def test_mean_of_two_is_their_middle_and_the_cosine_of_half_their_angle(middle, 
     assert abs(got.resultant - math.cos(half)) <= 4 * ULP
 
 
+@PATIENT
 @given(st.lists(st.floats(-PI, PI), min_size=1, max_size=10), st.floats(-10.0, 10.0))
 def test_mean_turns_with_the_frame(angles, by):
     here, turned = mean(angles), mean(np.add(angles, by))
@@ -583,23 +595,23 @@ def test_bad_calls_are_refused_in_words(call, text):
 
 @NEEDS_COMPILER
 @given(st.floats())
-@settings(deadline=None, max_examples=500)
+@settings(PATIENT, max_examples=500)
 def test_wrap_kernel_gives_the_bits_of_plain_python(angle):
     assert same_bits(wrap_kernel(angle), wrap_kernel.py_func(angle)) or math.isnan(angle)
     assert same_bits(wrap(angle), wrap_kernel(angle)) or math.isnan(wrap_kernel(angle))
 
 
 @NEEDS_COMPILER
+@PATIENT
 @given(st.floats(-1e6, 1e6), st.floats(-1e6, 1e6))
-@settings(deadline=None)
 def test_difference_kernel_gives_the_bits_of_plain_python(target, origin):
     assert same_bits(difference_kernel(target, origin), difference_kernel.py_func(target, origin))
     assert same_bits(difference_kernel(target, origin), difference(target, origin))
 
 
 @NEEDS_COMPILER
+@PATIENT
 @given(st.lists(st.tuples(st.floats(-1e3, 1e3), st.floats(0.0, 1e3)), max_size=8))
-@settings(deadline=None)
 def test_mean_kernel_gives_the_bits_of_plain_python(samples):
     angles, weights = (np.array([sample[i] for sample in samples], dtype=np.float64) for i in (0, 1))
     assert np.array_equal(mean_kernel(angles, weights), mean_kernel.py_func(angles, weights), equal_nan=True)

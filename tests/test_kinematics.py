@@ -38,6 +38,7 @@ HEADINGS = st.floats(-PI, PI)
 SPEEDS = st.floats(-2.0, 2.0)
 RATES = st.floats(-6.0, 6.0)
 SPANS = st.floats(0.0, 5.0)
+PATIENT = settings(deadline=None)  # the first call of a kernel compiles it
 NEEDS_COMPILER = pytest.mark.skipif(not compiled.ON, reason="without the compiler the kernels are plain Python already")
 
 
@@ -212,18 +213,21 @@ def test_euler_is_of_order_one_and_the_midpoint_rule_of_order_two():
 # arc: symmetries
 
 
+@PATIENT
 @given(PLACES, PLACES, HEADINGS, SPEEDS, RATES, SPANS, st.floats(0.0, 1.0))
 def test_two_arcs_of_the_same_motion_are_one(x, y, heading, v, w, duration, share):
     halfway = arc((x, y, heading), (v, w), share * duration)
     assert close(arc(halfway, (v, w), duration - share * duration), arc((x, y, heading), (v, w), duration), 1e-12)
 
 
+@PATIENT
 @given(PLACES, PLACES, HEADINGS, SPEEDS, RATES, SPANS)
 def test_the_arc_of_the_opposite_motion_leads_back(x, y, heading, v, w, duration):
     there = arc((x, y, heading), (v, w), duration)
     assert close(arc(there, (-v, -w), duration), (x, y, heading), 1e-12)
 
 
+@PATIENT
 @given(PLACES, PLACES, HEADINGS, SPEEDS, RATES, SPANS, HEADINGS)
 def test_arc_does_not_depend_on_the_frame(x, y, heading, v, w, duration, by):
     def turned(pose):
@@ -234,12 +238,15 @@ def test_arc_does_not_depend_on_the_frame(x, y, heading, v, w, duration, by):
     assert close(arc(turned((x, y, heading)), (v, w), duration), expected, 1e-12)
 
 
+@PATIENT
 @given(PLACES, PLACES, HEADINGS, SPEEDS, RATES, SPANS)
 def test_the_mirrored_motion_makes_the_mirrored_arc(x, y, heading, v, w, duration):
     got, expected = arc((x, -y, -heading), (v, -w), duration), arc((x, y, heading), (v, w), duration)
-    assert close(got, (expected.x, -expected.y, -expected.heading), 0.0)
+    assert (got.x, got.y) == (expected.x, -expected.y)
+    assert abs(difference(got.heading, -expected.heading)) <= 4 * ROUNDING  # half a turn is +pi on either side
 
 
+@PATIENT
 @given(HEADINGS, SPEEDS, RATES, SPANS)
 def test_arc_scales_with_the_unit_of_length(heading, v, w, duration):
     got, expected = arc((0, 0, heading), (8 * v, w), duration), arc((0, 0, heading), (v, w), duration)
@@ -303,6 +310,7 @@ def test_wheels_by_hand():
     assert isinstance(to_wheels((1, 0), 1), Wheels)
 
 
+@PATIENT
 @given(SPEEDS, RATES, st.floats(0.05, 2.0))
 def test_wheels_and_motion_are_inverse_both_ways(v, w, track_width):
     back = to_motion(to_wheels((v, w), track_width), track_width)
@@ -312,6 +320,7 @@ def test_wheels_and_motion_are_inverse_both_ways(v, w, track_width):
     assert np.allclose(wheels, (v, w), rtol=0.0, atol=8 * ROUNDING * 8.0)
 
 
+@PATIENT
 @given(PLACES, PLACES, HEADINGS, SPEEDS, RATES, st.floats(0.05, 2.0))
 def test_each_wheel_rolls_at_its_own_speed(x, y, heading, v, w, track_width):
     # each contact point, half a track to its side, moves along its own arc: numerically, path over time
@@ -327,6 +336,7 @@ def test_each_wheel_rolls_at_its_own_speed(x, y, heading, v, w, track_width):
 # odometry and counters
 
 
+@PATIENT
 @given(PLACES, PLACES, HEADINGS, SPEEDS, SPEEDS, st.floats(0.1, 1.0), st.floats(0.01, 1.0))
 def test_odometry_is_the_arc_of_the_wheels(x, y, heading, left, right, track_width, duration):
     expected = arc((x, y, heading), to_motion((left, right), track_width), duration)
@@ -418,6 +428,7 @@ def test_frames_by_hand(pose, seen, place):
     assert np.allclose(to_robot(pose, place), seen, rtol=0.0, atol=16 * ROUNDING)
 
 
+@PATIENT
 @given(PLACES, PLACES, HEADINGS, PLACES, PLACES)
 def test_frames_are_inverse_both_ways(x, y, heading, a, b):
     pose = (x, y, heading)
@@ -435,6 +446,7 @@ def test_frames_agree_with_rotations():
         assert np.allclose(to_robot((x, y, heading), point), expected, rtol=0.0, atol=1e-14)
 
 
+@PATIENT
 @given(PLACES, PLACES, HEADINGS, SPEEDS, RATES, SPANS)
 def test_an_arc_in_the_robots_frame_starts_at_zero(x, y, heading, v, w, duration):
     end, local = arc((x, y, heading), (v, w), duration), arc((0, 0, 0), (v, w), duration)
@@ -457,6 +469,7 @@ def test_sighting_by_hand(bearing, distance, expected):
     assert np.allclose(sighting(bearing, distance), expected, rtol=0.0, atol=4 * ROUNDING)
 
 
+@PATIENT
 @given(PLACES, PLACES, HEADINGS, HEADINGS, st.floats(0.01, 20.0))
 def test_a_sighting_lies_at_its_bearing_from_the_heading(x, y, heading, bearing, distance):
     place = to_world((x, y, heading), sighting(bearing, distance))
@@ -480,6 +493,11 @@ POSE, MOTION = "give x, y, heading along the last axis", "give speed, turn rate 
             lambda: arc((0, 0, 0), (1, 0, 0), 1), f"motion of shape (3,) does not fit; {MOTION}", id="three numbers of a motion"
         ),
         pytest.param(lambda: arc((0, 0, 0), 1.0, 1), f"motion of shape () does not fit; {MOTION}", id="a float for a motion"),
+        pytest.param(
+            lambda: arc(np.zeros((4, 3)), np.zeros((5, 2)), 1),
+            "pose, motion, duration of shapes ((4,), (5,), ()) do not fit; give as many of each, or one for all",
+            id="4 poses, 5 motions",
+        ),
         pytest.param(lambda: to_wheels((1, 0), 0), f"track_width=0 m must be > 0; {WIDTH}", id="to_wheels, no width"),
         pytest.param(lambda: to_motion((1, 0), -0.4), f"track_width=-0.4 m must be > 0; {WIDTH}", id="to_motion, negative width"),
         pytest.param(
@@ -497,17 +515,12 @@ def test_bad_calls_are_refused_in_words(call, text):
         call()
 
 
-def test_shapes_that_do_not_broadcast_are_refused():
-    with pytest.raises(ValueError, match=r"shape mismatch.*\(4,\).*\(5,\)"):
-        arc(np.zeros((4, 3)), np.zeros((5, 2)), 1.0)
-
-
 # kernels against the same function in plain Python
 
 
 @NEEDS_COMPILER
+@PATIENT
 @given(PLACES, PLACES, HEADINGS, SPEEDS, RATES, SPANS)
-@settings(deadline=None)
 def test_arc_kernel_gives_the_bits_of_plain_python(x, y, heading, v, w, duration):
     got = arc_kernel(x, y, heading, v, w, duration)
     assert got == arc_kernel.py_func(x, y, heading, v, w, duration)

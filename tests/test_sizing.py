@@ -6,12 +6,12 @@ import math
 
 import numpy as np
 import pytest
-from closed_loop import drive
 from scipy.special import lambertw
-from studies import gain_limits, heading_errors, linear_robot, orbit_errors
 
+from closed_loop import drive
 from steerkit import Controller, Platform, sizing
 from steerkit.kinematics import arc
+from studies import gain_limits, heading_errors, linear_robot, orbit_errors
 
 FINE = 1e-3  # s, a period short enough to stand for continuous time
 
@@ -79,13 +79,15 @@ def test_whole_period_limits_are_the_published_ones(d, stable, smooth):
 
 
 # H4, fractional delay m: stable iff K T < min(1/m, 2/(1-2m)), smooth iff K T <= 1/(1+sqrt m)^2 (derived).
-@pytest.mark.parametrize(("m", "stable", "smooth"), [(0.1, 2.5, 0.57722), (0.25, 4.0, 0.44444), (0.5, 2.0, 0.34315), (0.75, 1.33333, 0.28719)])
+@pytest.mark.parametrize(
+    ("m", "stable", "smooth"), [(0.1, 2.5, 0.57722), (0.25, 4.0, 0.44444), (0.5, 2.0, 0.34315), (0.75, 1.33333, 0.28719)]
+)
 def test_fractional_limits_are_the_derived_ones(m, stable, smooth):
     assert sizing.stable_gain(1.0, m) == pytest.approx(stable, abs=5e-6)
     assert sizing.no_overshoot_gain(1.0, m) == pytest.approx(smooth, abs=5e-6)
 
 
-# Laws of the loop with dead time and lag (derived; checked against polynomial roots), (T, tau, tau_m): stable, smooth, both times T.
+# The loop with dead time and lag (derived; checked against polynomial roots); stable and smooth gain, both times T.
 @pytest.mark.parametrize(
     ("T", "tau", "lag", "stable", "smooth"),
     [
@@ -144,7 +146,8 @@ def test_lag_alone_overshoots_as_a_second_order_loop(share, overshoot):
 
 # Correction 18 of a derivative on a sampled integrator: stable iff |Kd| < 1, Kp T > 0, Kp T + 2 Kd < 2 (Jury; derived).
 @pytest.mark.parametrize(
-    ("kp", "kd", "stable"), [(0.5, 0.7, True), (0.5, 0.74, True), (0.5, 0.76, False), (1.9, 0.0, True), (0.2, -0.99, True), (0.2, -1.01, False)]
+    ("kp", "kd", "stable"),
+    [(0.5, 0.7, True), (0.5, 0.74, True), (0.5, 0.76, False), (1.9, 0.0, True), (0.2, -0.99, True), (0.2, -1.01, False)],
 )
 def test_slowest_root_knows_the_derivative_border(kp, kd, stable):
     size = sizing.slowest_root(kp, math.inf, kd / kp, 1.0)

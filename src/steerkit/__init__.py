@@ -36,7 +36,21 @@ HOMES = {
     "Wheels": "signals",
 }
 
-__all__ = ["Causes", "Command", "Controller", "Decision", "Frame", "Measurement", "Memory", "Motion", "Phase", "Platform", "Pose", "Report", "Wheels"]
+__all__ = [
+    "Causes",
+    "Command",
+    "Controller",
+    "Decision",
+    "Frame",
+    "Measurement",
+    "Memory",
+    "Motion",
+    "Phase",
+    "Platform",
+    "Pose",
+    "Report",
+    "Wheels",
+]
 __version__ = "0.1.0"
 
 

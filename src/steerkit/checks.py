@@ -21,6 +21,12 @@ def rounded_down(value: float, digits: int = 4) -> float:
     return float(f"{math.floor(value / unit) * unit:.{digits}g}")
 
 
+def rounded_up(value: float, digits: int = 4) -> float:
+    """Return a positive number raised to some digits."""
+    unit = 10.0 ** (math.floor(math.log10(value)) - digits + 1)
+    return float(f"{math.ceil(value / unit) * unit:.{digits + 1}g}")
+
+
 def check_number(name: str, value: object, unit: str, repair: str) -> float:
     """Return `value` as a finite float."""
     if isinstance(value, bool) or not isinstance(value, numbers.Real):
@@ -66,5 +72,7 @@ def check_weights(weights: ArrayLike, shape: tuple[int, ...]) -> NDArray[np.floa
     bad = np.argwhere(~(np.isfinite(shares) & (shares >= 0.0)))
     if len(bad):
         first = tuple(int(i) for i in bad[0])
-        raise ValueError(f"weights{list(first)}={shares[first]:.6g} must be finite and >= 0 ({len(bad)} such); drop the sample or give it 0")
+        raise ValueError(
+            f"weights{list(first)}={shares[first]:.6g} must be finite and >= 0 ({len(bad)} such); drop the sample or give it 0"
+        )
     return shares

@@ -15,11 +15,13 @@ import os
 import shutil
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
+from importlib import import_module
 from pathlib import Path
 from typing import Any, TypeVar, cast
 
+numba: Any
 try:
-    import numba
+    numba = import_module("numba")
 except ImportError:  # a small board: everything below runs as plain Python
     numba = None
 

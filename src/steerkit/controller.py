@@ -1,7 +1,7 @@
 """Controller: the step that a control loop calls.
 
-Construction is where things fail, with a sentence. `step` is pure and never raises on data: the same memory and measurement give the
-same bits, and bad data becomes a stop within the limits and a cause that says why.
+Construction is where things fail, with a sentence. `step` is pure and never raises on data: the same memory and measurement give
+the same bits, and bad data becomes a stop within the limits and a cause that says why.
 """
 
 from __future__ import annotations
@@ -14,7 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from steerkit import compiled, sizing
-from steerkit.checks import check_above_zero, check_not_negative, rounded_down, shown
+from steerkit.checks import check_above_zero, check_not_negative, rounded_down, rounded_up, shown
 from steerkit.platforms import Platform
 from steerkit.signals import HEAD, Causes, Command, Decision, Measurement, Memory, Motion, Phase, Pose, Report
 from steerkit.step import FAR, FAST, MEASURED, RESULT, Settings, fresh_kernel, in_place_kernel, step_kernel
@@ -144,11 +144,11 @@ class Controller:
 
     def start(self, time: float, motion: tuple[float, float] = (0.0, 0.0)) -> Memory:
         """Return the memory to begin with at `time` (s), for a robot at rest or already in motion (m/s, rad/s)."""
-        numbers = [float(time), float(motion[0]), float(motion[1])]
-        if not (abs(numbers[0]) <= FAR and abs(numbers[1]) <= FAST and abs(numbers[2]) <= FAST):
+        began, v, w = float(time), float(motion[0]), float(motion[1])
+        if not (abs(began) <= FAR and abs(v) <= FAST and abs(w) <= FAST):
             raise ValueError(f"start(time={time!r}, motion={motion!r}) must be finite; give seconds, m/s and rad/s")
         row = np.empty(self._size)
-        fresh_kernel(row, self._rows, *numbers, self.settings.period, self.settings.stale_after)  # type: ignore[arg-type]
+        fresh_kernel(row, self._rows, began, v, w, self.settings.period, self.settings.stale_after)  # type: ignore[arg-type]
         return Memory(row)
 
     def step(self, memory: Memory, measurement: Measurement) -> Decision:
@@ -207,7 +207,8 @@ class Controller:
         kept = "the fastest workable" if self.speed == w.fastest else f"the fastest workable is {w.fastest:.3g} m/s"
         lines = [
             f"Constant speed {self.speed:.3g} m/s ({kept}; bound by {w.bound}).",
-            f"Heading gain {self.gain:.3g} 1/s; those from {w.low:.3g} to {w.high:.3g} 1/s work; turn rate up to {w.ceiling:.3g} rad/s.",
+            f"Heading gain {self.gain:.3g} 1/s; those from {w.low:.3g} to {w.high:.3g} 1/s work.",
+            f"Turn rate up to {w.ceiling:.3g} rad/s.",
             "Unguarded: no range sensor; nothing here looks for obstacles.",
         ]
         return "\n".join(lines + self.platform.notes())
@@ -327,9 +328,7 @@ def check_window(platform: Platform, found: sizing.Window, speed: float, capture
             f"widen it, or drive at {workable} or less"
         )
     if speed > found.fastest * (1.0 + 1e-12):
-        raise ValueError(
-            f"speed={shown(speed, 'm/s')}: no gain works, bound by {found.bound}; at {workable} or less one does"
-        )
+        raise ValueError(f"speed={shown(speed, 'm/s')}: no gain works, bound by {found.bound}; at {workable} or less one does")
 
 
 def checked_gain(
@@ -340,7 +339,8 @@ def checked_gain(
         chosen = check_above_zero("gain", gain, "1/s", "give turn rate per heading error, or leave it out")
         if not found.low * (1.0 - 1e-12) <= chosen <= found.high * (1.0 + 1e-12):
             what = "circles the goal" if chosen < found.low else "swings"
-            raise ValueError(f"gain={shown(chosen, '1/s')} {what}; give {found.low:.6g} to {found.high:.6g} 1/s, or leave it out")
+            working = f"{rounded_up(found.low):g} to {rounded_down(found.high):g} 1/s"
+            raise ValueError(f"gain={shown(chosen, '1/s')} {what}; give {working}, or leave it out")
     if not (isinstance(integral_time, float) and integral_time == math.inf):
         check_above_zero("integral_time", integral_time, "s", "give the time in which the integral repeats the error; inf for none")
     check_not_negative("derivative_time", derivative_time, "s", "give the time by which the derivative looks ahead; 0 for none")
@@ -363,4 +363,3 @@ def checked_age(platform: Platform, stale_after: object) -> float:
     if age > 10.0:
         raise ValueError(f"stale_after={shown(age, 's')} must be <= 10 s; a pose that old says nothing")
     return age
-

@@ -1,8 +1,9 @@
 """Heading: error to turn rate, by P, PI or PID.
 
-turn_rate = clip(gain * (error + integral/integral_time - derivative_time * heading rate), +-ceiling), the error the short way round.
-The derivative acts on the measured heading, not on the error, so that a new goal gives no kick. The integral stands still while more
-is asked than is given, and so never has to be unwound (conditional integration: Astrom & Hagglund 2006, section 3.5, from memory).
+turn_rate = clip(gain * (error + integral/integral_time - derivative_time * heading rate), +-ceiling), the error the short way
+round. The derivative acts on the measured heading, not on the error, so that a new goal gives no kick. The integral stands still
+while more is asked than is given, and so never has to be unwound (conditional integration: Astrom & Hagglund 2006, section 3.5,
+from memory).
 
 Radians, seconds; counter-clockwise positive.
 """
@@ -36,9 +37,8 @@ class HeadingMemory(NamedTuple):
 @kernel
 def heading_rate_kernel(heading: float, before: float, duration: float) -> float:
     """Return how fast the heading moved (rad/s), the short way round; 0 where there is no heading before."""
-    if before != before or not duration > 0.0:
-        return 0.0
-    return difference_kernel(heading, before) / duration
+    turned = difference_kernel(heading, before)
+    return turned / duration if turned == turned and duration > 0.0 else 0.0
 
 
 @kernel
@@ -72,8 +72,7 @@ def steer(
     duration : float, s
         Time since the last step.
     given : float, rad/s, or None
-        The turn rate that later limits left of the last answer is not known yet here: pass what they would give now, or None
-        where only the law's own ceiling binds.
+        What is left of the answer where more than the ceiling limits it, for the integral; None where nothing does.
 
     Returns
     -------

@@ -100,9 +100,15 @@ def arc(pose: ArrayLike, motion: ArrayLike, duration: ArrayLike) -> Pose | Array
     poses, motions, spans = (np.asarray(value, dtype=np.float64) for value in (pose, motion, duration))
     check_shapes("pose", poses.shape[-1:] == (3,), poses.shape, "x, y, heading along the last axis")
     check_shapes("motion", motions.shape[-1:] == (2,), motions.shape, "speed, turn rate along the last axis")
-    shape = np.broadcast_shapes(poses.shape[:-1], motions.shape[:-1], spans.shape)
+    shapes = (poses.shape[:-1], motions.shape[:-1], spans.shape)
+    try:
+        shape = np.broadcast_shapes(*shapes)
+    except ValueError:
+        raise ValueError(f"pose, motion, duration of shapes {shapes} do not fit; give as many of each, or one for all") from None
     if shape == ():
-        return Pose(*arc_kernel(*poses.tolist(), *motions.tolist(), float(spans)))
+        x, y, heading = poses.tolist()
+        speed, turn_rate = motions.tolist()
+        return Pose(*arc_kernel(x, y, heading, speed, turn_rate, float(spans)))
     out = np.empty((*shape, 3))
     arc_row_kernel(
         np.ascontiguousarray(np.broadcast_to(poses, (*shape, 3))).reshape(-1, 3),

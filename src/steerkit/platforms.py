@@ -93,7 +93,11 @@ class Platform:
         for one in fields(self):
             object.__setattr__(self, one.name, checked(one, getattr(self, one.name)))
         check_at_most(
-            "track_width", self.track_width, "m", 2.0 * self.radius, "the wheels stand inside the footprint, 2 * radius: measure both again"
+            "track_width",
+            self.track_width,
+            "m",
+            2.0 * self.radius,
+            "the wheels stand inside the footprint, 2 * radius: measure both again",
         )
 
     @property
@@ -110,10 +114,14 @@ class Platform:
         """Return a sentence for each declared number that another one makes idle."""
         found = []
         if self.speed_limit > self.wheel_speed_limit:
-            found.append(f"The wheels give {self.wheel_speed_limit:.3g} m/s; speed_limit={self.speed_limit:.3g} m/s is never reached.")
+            found.append(
+                f"The wheels give {self.wheel_speed_limit:.3g} m/s; speed_limit={self.speed_limit:.3g} m/s is never reached."
+            )
         spot = 2.0 * self.wheel_speed_limit / self.track_width
         if self.turn_rate_limit > spot:
-            found.append(f"The wheels give {spot:.3g} rad/s on the spot; turn_rate_limit={self.turn_rate_limit:.3g} rad/s is never reached.")
+            found.append(
+                f"The wheels give {spot:.3g} rad/s on the spot; turn_rate_limit={self.turn_rate_limit:.3g} rad/s is never reached."
+            )
         return found
 
     def to_json(self) -> str:
@@ -133,7 +141,9 @@ class Platform:
             raise ValueError(f"the platform file has no {VERSION_KEY}; write it with Platform.to_json")
         version = rows.pop(VERSION_KEY)
         if version != VERSION:
-            raise ValueError(f"{VERSION_KEY}={version!r} must be {VERSION}; read it with the steerkit that wrote it, or write it again")
+            raise ValueError(
+                f"{VERSION_KEY}={version!r} must be {VERSION}; read it with the steerkit that wrote it, or write it again"
+            )
         keys = {f"{one.name}_{unit_suffix(one.metadata['unit'])}": one for one in fields(cls)}
         unknown = sorted(set(rows) - set(keys))
         if unknown:

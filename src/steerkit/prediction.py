@@ -1,9 +1,9 @@
 """Prediction: from the pose that was measured to the pose at which a new command will take effect.
 
-A command sent at time t acts from t + dead time until the next one acts. Behind it the wheels follow with a first-order lag. Moving
-the pose through the commands under way takes dead time and lag out of the heading loop (Smith 1957; Manitius & Olbrot 1979, both from
-memory); what is left is the roll-out of the lag, taken out by coasting: path = sum of command times time + lag * (speed before -
-speed after), so the pose that counts lies lag * speed further on (derived).
+A command sent at time t acts from t + dead time until the next one acts. Behind it the wheels follow with a first-order lag.
+Moving the pose through the commands under way takes dead time and lag out of the heading loop (Smith 1957; Manitius & Olbrot
+1979, both from memory); what is left is the roll-out of the lag, taken out by coasting: path = sum of command times time +
+lag * (speed before - speed after), so the pose that counts lies lag * speed further on (derived).
 
 The commands under way are rows (age s, speed m/s, turn rate rad/s) of the memory, newest first, ages as of the last step.
 Times below are seconds from now, negative in the past.
@@ -163,4 +163,3 @@ def stop_end_kernel(
         step = path * 2.0 * left / pieces
         x, y, heading = arc_kernel(x, y, heading, step, math.copysign(turning, w) * span / pieces, 1.0)
     return x, y
-

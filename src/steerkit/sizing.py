@@ -58,7 +58,7 @@ def no_overshoot_gain(period: float, dead_time: float = 0.0, motor_lag: float = 
     if motor_lag > SHORT_LAG * period:
         return lagged_no_overshoot(d, m, motor_lag / period) / period
     if m == 0.0:
-        return d**d / (d + 1.0) ** (d + 1) / period
+        return float(d) ** d / (d + 1.0) ** (d + 1) / period
     q, n = 1.0 - m, d + 1.0
     b = n * (1.0 - 2.0 * m) - 1.0
     s = math.sqrt(b * b + 4.0 * n * n * q * m)
@@ -138,12 +138,12 @@ def slowest_root(
 ) -> float:
     """Return the size of the largest root of the heading loop with P, PI or PID (below 1: stable; 1 is the border).
 
-    The controller is gain (1 + T/(Ti) z/(z-1) + Td/T (z-1)/z), T the period. Used to refuse gains that swing for ever.
+    The controller is gain (1 + T/Ti 1/(z-1) + Td/T (z-1)/z), T the period. Used to refuse gains that swing for ever.
     """
     d, m = split_delay(dead_time, period)
     denominator, numerator = lagged_loop(d, m, motor_lag / period if motor_lag > SHORT_LAG * period else 0.0)
     share = period / integral_time
-    control = np.polyadd(np.polyadd([1.0, -1.0, 0.0], [share, 0.0, 0.0]), derivative_time / period * np.array([1.0, -2.0, 1.0]))
+    control = np.polyadd(np.polyadd([1.0, -1.0, 0.0], [share, 0.0]), derivative_time / period * np.array([1.0, -2.0, 1.0]))
     closed = np.polyadd(np.polymul(denominator, [1.0, -1.0, 0.0]), gain * period * np.polymul(numerator, control))
     if share == 0.0:
         closed = np.polydiv(closed, [1.0, -1.0])[0]

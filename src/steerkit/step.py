@@ -322,7 +322,7 @@ def step_kernel(settings: Sequence[float], memory: Sequence[float], measured: Se
     phase = DRIVING
     if held:
         phase = HELD
-    elif v1 == 0.0 and w1 == 0.0 and (arrived and distance <= stay_radius or rest and distance <= capture_radius):
+    elif v1 == 0.0 and w1 == 0.0 and ((arrived and distance <= stay_radius) or (rest and distance <= capture_radius)):
         phase = ARRIVED
 
     # The new memory; out may be memory, so each place is read before it is written.
@@ -377,7 +377,8 @@ def step_kernel(settings: Sequence[float], memory: Sequence[float], measured: Se
 def in_place_kernel(settings: Sequence[float], row: Sequence[float], size: int) -> None:
     """Step on one row [memory of `size` | measurement | result]: reads the first two, writes the first and the last."""
     memory = row[:size]
-    measured = row[size : size + MEASURED]
+    m = row[size:]
+    measured = (m[0], m[1], m[2], m[3], m[4], m[5], m[6], m[7], m[8], m[9], m[10], m[11], m[12], m[13], m[14])
     result = step_kernel(settings, memory, measured, memory)  # type: ignore[arg-type]
     for i in range(RESULT):
         row[size + MEASURED + i] = result[i]  # type: ignore[index]
