@@ -12,7 +12,7 @@ import numpy as np
 
 from closed_loop import ARRIVED, CAPTURED, drive
 from robots import Robot, draw, draw_start
-from steerkit import Controller, Platform, sizing
+from steerkit import Causes, Controller, Measurement, Platform, sizing
 
 FREE = 1e9  # a limit that never binds
 FAR_GOAL = 1e9  # m; its bearing does not change
@@ -291,6 +291,77 @@ def proposed_speeds(robots: int, seed: int) -> tuple[int, int]:
     return refused, again
 
 
+class Storm(NamedTuple):
+    """Steps made under wild measurements and overrides, the worst excess over any limit (relative), steps of each cause."""
+
+    steps: int
+    worst: float
+    causes: Counter[str]
+
+
+def limit_storm(steps: int, seed: int) -> Storm:
+    """Step random robots through wild measurements, limits of the step and overrides; measure the excess over every limit.
+
+    Where the command before is within the limits, so must be the new one; each component changes by at most a period's worth;
+    what is outside already comes back at the full rate.
+    """
+    rng = np.random.default_rng(seed)
+    made, worst, causes = 0, 0.0, Counter[str]()
+    while made < steps:
+        robot = draw(rng)
+        p = robot.platform
+        controller = Controller(p, capture_radius=robot.capture_radius)
+        memory, time = controller.start(0.0), 0.0
+        wild = rng.choice([0.0, -1.0, 1e-9, 1e3, math.nan, math.inf, -math.inf, 1e300], size=(500, 14))
+        fields = np.where(rng.random((500, 14)) < 0.02, wild, rng.normal(0.0, 3.0, (500, 14)))
+        place = np.repeat(rng.normal(0.0, 3.0, (10, 5)), 50, axis=0)  # a pose and a goal stay for fifty steps
+        fields[:, 4:9] = np.where(rng.random((500, 5)) < 0.97, place, fields[:, 4:9])
+        for f in fields.tolist():
+            time += p.period * (1.0 if abs(f[0]) < 4.0 else rng.uniform(0.0, 2.0))
+            told = time if abs(f[12]) < 7.0 else time + f[12]
+            others = (f[1] * p.top_speed * 0.4, f[2] * p.turn_rate_limit * 0.4) if f[3] > 3.0 else (math.nan, math.nan)
+            measurement = Measurement(
+                told,
+                (f[4], f[5], f[6]),
+                (f[7], f[8]),
+                speed_limit=abs(f[9]) if f[10] > 2.0 else math.nan,
+                hold=f[11] > 4.0,
+                applied=others,
+            )
+            before = others if all(abs(x) < 1e4 for x in others) else memory.command
+            decision = controller.step(memory, measurement)
+            since = told - memory.time
+            early = since / p.period if 0.0 < since < p.period else 1.0  # an early step may change as much less
+            worst = max(worst, excess(controller, before, decision.command, measurement, early))
+            causes.update(one.name for one in Causes if one in decision.causes and one.name)
+            memory = decision.memory
+            made += 1
+    return Storm(made, worst, causes)
+
+
+def excess(controller: Controller, before, command, measurement, early: float) -> float:
+    """Return by how much, relative, a command breaks a limit that it could have kept."""
+    p = controller.platform
+    v0, w0 = before
+    v, w = command.speed, command.turn_rate
+    half = p.track_width / 2.0
+    a, b, al = (rate * p.period * early for rate in (p.acceleration, p.braking, p.turn_acceleration))
+    top = min(p.top_speed, max(0.0, measurement.speed_limit)) if measurement.speed_limit == measurement.speed_limit else p.top_speed
+    slowest, least_turn = max(0.0, abs(v0) - b), max(0.0, abs(w0) - al)
+    grown = abs(v) - abs(v0) if v * v0 >= 0.0 else abs(v)
+    shrunk = abs(v0) - abs(v) if v * v0 >= 0.0 else abs(v0)
+    return max(
+        grown / a - 1.0,
+        shrunk / b - 1.0,
+        abs(w - w0) / al - 1.0,
+        abs(v) / max(top, slowest, 1e-12) - 1.0 if abs(v) > 1e-12 else 0.0,
+        abs(w) / max(p.turn_rate_limit, least_turn) - 1.0,
+        (abs(v) + abs(w) * half) / max(p.wheel_speed_limit, slowest + least_turn * half) - 1.0,
+        -v / p.top_speed if v0 >= 0.0 else 0.0,  # forward only
+        max(abs(command.left - (v - w * half)), abs(command.right - (v + w * half))) / p.wheel_speed_limit,
+    )
+
+
 STUDIES = {
     "gain limits, predicted": lambda n: gain_limits(n, True, 11),
     "gain limits, unpredicted": lambda n: gain_limits(n, False, 12),
@@ -299,6 +370,7 @@ STUDIES = {
     "20 % below the window (robots, captured)": lambda n: below_the_window(n, 15),
     "10 % above the stability (robots, calm)": lambda n: above_the_stability(n, 16),
     "1.25 x the fastest speed": lambda n: faster_than_workable(n, 17),
+    "commands within limits": lambda n: limit_storm(500 * n, 19),
     "proposals (refused, refused again)": lambda n: proposed_speeds(n, 18),
 }
 

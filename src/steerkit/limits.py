@@ -84,7 +84,7 @@ def limit_kernel(
 
     aim = clip_kernel(share * w, -turn, turn)
     if v == 0.0 and w == 0.0 and v0 != 0.0:
-        aim = w0 * max(0.0, v1 / v0)
+        aim = clip_kernel(w0 * max(0.0, v1 / v0), -turn, turn)
     w1 = clip_kernel(aim, w0 - turning, w0 + turning)
     if abs(w1 - aim) > ROUNDING:
         bound |= TURN_ACCELERATION
