@@ -1,0 +1,11 @@
+"""Test lanes: NUMBA_DISABLE_JIT=1 switches the compiler off; STEERKIT_TEST_WITHOUT_NUMBA=1 makes numba impossible to import."""
+
+from __future__ import annotations
+
+import os
+import sys
+
+if os.environ.get("STEERKIT_TEST_WITHOUT_NUMBA"):
+    sys.modules["numba"] = None  # type: ignore[assignment]
+
+os.environ.setdefault("MPLBACKEND", "Agg")
