@@ -18,6 +18,8 @@ from numpy.typing import ArrayLike, NDArray
 from steerkit.checks import check_shapes, check_weights
 from steerkit.compiled import kernel
 
+__all__ = ["CircularMean", "difference", "mean", "unwrap", "wrap"]
+
 PI = math.pi
 TURN = 2.0 * math.pi
 UNDEFINED = 1e-12  # a mean resultant length below this is rounding: the directions cancel, and the mean has no direction

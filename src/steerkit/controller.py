@@ -19,6 +19,8 @@ from steerkit.platforms import Platform
 from steerkit.signals import HEAD, Causes, Command, Decision, Measurement, Memory, Motion, Phase, Pose, Report
 from steerkit.step import FAR, FAST, MEASURED, RESULT, Settings, fresh_kernel, in_place_kernel, step_kernel
 
+__all__ = ["Controller", "InPlace"]
+
 Array = NDArray[np.float64]
 
 FIFTEEN = Struct("15d")  # turns ints, float32 and bools into floats, and refuses strings, in a third of the time of float()

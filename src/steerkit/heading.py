@@ -17,6 +17,8 @@ from steerkit.angles import difference_kernel
 from steerkit.compiled import kernel
 from steerkit.limits import clip_kernel
 
+__all__ = ["HeadingLaw", "HeadingMemory", "steer"]
+
 
 class HeadingLaw(NamedTuple):
     """Settings: gain 1/s; ceiling rad/s; integral_time s, infinite for none; derivative_time s, 0 for none."""

@@ -16,6 +16,8 @@ from steerkit.checks import check_above_zero, check_shapes
 from steerkit.compiled import kernel
 from steerkit.signals import Motion, Pose, Wheels
 
+__all__ = ["arc", "count_step", "odometry", "sighting", "to_motion", "to_robot", "to_wheels", "to_world"]
+
 Array = NDArray[np.float64]
 
 
@@ -120,35 +122,102 @@ def arc(pose: ArrayLike, motion: ArrayLike, duration: ArrayLike) -> Pose | Array
 
 
 def to_wheels(motion: tuple[float, float], track_width: float) -> Wheels:
-    """Return the wheel speeds (m/s) of a motion (m/s, rad/s) for a track width (m).
+    """Return the wheel speeds of a motion.
+
+    Parameters
+    ----------
+    motion : (float, float), m/s, rad/s
+    track_width : float, m
+
+    Returns
+    -------
+    Wheels, m/s
+
+    Raises
+    ------
+    ValueError
+        A track width that is not > 0.
 
     Examples
     --------
-    >>> to_wheels((0.5, 2.0), track_width=0.4)
-    Wheels(left=0.1, right=0.9)
+    >>> left, right = to_wheels((0.5, 2.0), track_width=0.4)
+    >>> round(left, 9), round(right, 9)
+    (0.1, 0.9)
     """
     width = check_above_zero("track_width", track_width, "m", "give the distance between the wheel contact points")
     return Wheels(*wheels_kernel(float(motion[0]), float(motion[1]), width))
 
 
 def to_motion(wheels: tuple[float, float], track_width: float) -> Motion:
-    """Return the motion (m/s, rad/s) of two wheel speeds (left, right; m/s) for a track width (m)."""
+    """Return the motion of two wheel speeds (Dudek & Jenkin 2010, chapter 3, from memory).
+
+    Parameters
+    ----------
+    wheels : (float, float), m/s
+        Left, right.
+    track_width : float, m
+
+    Returns
+    -------
+    Motion, m/s, rad/s
+
+    Raises
+    ------
+    ValueError
+        A track width that is not > 0.
+    """
     width = check_above_zero("track_width", track_width, "m", "give the distance between the wheel contact points")
     return Motion(*motion_kernel(float(wheels[0]), float(wheels[1]), width))
 
 
 def to_world(pose: tuple[float, float, float], point: tuple[float, float]) -> tuple[float, float]:
-    """Return in the world frame a point (m, m) seen by the robot at `pose` (m, m, rad) ahead and to the left of it."""
+    """Return in the world frame a point seen by the robot.
+
+    Parameters
+    ----------
+    pose : (float, float, float), m, m, rad
+        The robot's.
+    point : (float, float), m, m
+        Ahead and to the left of it.
+
+    Returns
+    -------
+    (float, float), m, m
+    """
     return to_world_kernel(float(pose[0]), float(pose[1]), float(pose[2]), float(point[0]), float(point[1]))
 
 
 def to_robot(pose: tuple[float, float, float], point: tuple[float, float]) -> tuple[float, float]:
-    """Return as (ahead, left) of the robot at `pose` (m, m, rad) a point (m, m) of the world frame."""
+    """Return a point of the world frame as the robot sees it.
+
+    Parameters
+    ----------
+    pose : (float, float, float), m, m, rad
+        The robot's.
+    point : (float, float), m, m
+
+    Returns
+    -------
+    (float, float), m, m
+        Ahead and to the left of it.
+    """
     return to_robot_kernel(float(pose[0]), float(pose[1]), float(pose[2]), float(point[0]), float(point[1]))
 
 
 def sighting(bearing: float, distance: float) -> tuple[float, float]:
-    """Return as (ahead, left), m, what a camera sees at a bearing (rad, left positive) and a distance (m)."""
+    """Return what a camera sees at a bearing and a distance as a point of the robot's frame.
+
+    Parameters
+    ----------
+    bearing : float, rad
+        From straight ahead, left positive.
+    distance : float, m
+
+    Returns
+    -------
+    (float, float), m, m
+        Ahead and to the left.
+    """
     return distance * math.cos(bearing), distance * math.sin(bearing)
 
 

@@ -14,6 +14,8 @@ from steerkit.compiled import kernel
 from steerkit.platforms import Platform
 from steerkit.signals import Causes, Motion
 
+__all__ = ["held_speed_to_stop_within", "held_stopping_distance", "limit", "speed_to_stop_within", "stopping_distance"]
+
 SPEED = int(Causes.SPEED_LIMIT)
 TURN_RATE = int(Causes.TURN_RATE_LIMIT)
 WHEELS = int(Causes.WHEEL_SPEED_LIMIT)
@@ -186,9 +188,20 @@ def stopping_distance(speed: float, braking: float, reaction: float = 0.0) -> fl
 
 
 def speed_to_stop_within(distance: float, braking: float, reaction: float = 0.0) -> float:
-    """Return the speed (m/s) whose `stopping_distance` is `distance` (m): its exact inverse, 0 for no distance.
+    """Return the speed whose `stopping_distance` is `distance`: its exact inverse, 0 for no distance.
 
     The well-known sqrt(2 b d) leaves the reaction out, and overruns by v T/2 in sampled time.
+
+    Parameters
+    ----------
+    distance : float, m
+    braking : float, m/s^2
+    reaction : float, s
+
+    Returns
+    -------
+    float, m/s
+        -b t + sqrt(b^2 t^2 + 2 b d), written without its cancellation (derived).
     """
     b = check_above_zero("braking", braking, "m/s^2", "give the steady deceleration of a full stop")
     t = check_not_negative("reaction", reaction, "s", "give the time before the brakes act")
@@ -197,14 +210,36 @@ def speed_to_stop_within(distance: float, braking: float, reaction: float = 0.0)
 
 
 def held_stopping_distance(speed: float, braking: float, period: float) -> float:
-    """Return the path (m) of a command of `speed` (m/s) held for a period (s), then ramped down by braking (m/s^2) each period."""
+    """Return the path of a command held for a period, then ramped down by braking * period each period (derived).
+
+    Parameters
+    ----------
+    speed : float, m/s, >= 0
+    braking : float, m/s^2
+    period : float, s
+
+    Returns
+    -------
+    float, m
+    """
     b = check_above_zero("braking", braking, "m/s^2", "give the steady deceleration of a full stop")
     t = check_above_zero("period", period, "s", "give the control period")
     return held_stop_kernel(check_not_negative("speed", speed, "m/s", "give its size"), b, t)
 
 
 def held_speed_to_stop_within(distance: float, braking: float, period: float) -> float:
-    """Return the largest command (m/s) whose `held_stopping_distance` is at most `distance` (m): its exact inverse."""
+    """Return the largest command whose `held_stopping_distance` is at most `distance`: its exact inverse (derived).
+
+    Parameters
+    ----------
+    distance : float, m
+    braking : float, m/s^2
+    period : float, s
+
+    Returns
+    -------
+    float, m/s
+    """
     b = check_above_zero("braking", braking, "m/s^2", "give the steady deceleration of a full stop")
     t = check_above_zero("period", period, "s", "give the control period")
     return held_speed_kernel(float(distance), b, t, math.inf)

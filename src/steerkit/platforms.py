@@ -12,6 +12,8 @@ from typing import Any
 
 from steerkit.checks import check_above_zero, check_at_most, check_not_negative, shown
 
+__all__ = ["Platform"]
+
 VERSION = 1
 VERSION_KEY = "steerkit_platform_version"
 

@@ -13,6 +13,20 @@ from typing import NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
+__all__ = [
+    "Causes",
+    "Command",
+    "Decision",
+    "Frame",
+    "Measurement",
+    "Memory",
+    "Motion",
+    "Phase",
+    "Pose",
+    "Report",
+    "Wheels",
+]
+
 NAN = math.nan
 
 
@@ -81,20 +95,6 @@ class Measurement(NamedTuple):
     speed_limit: float = NAN
     hold: float = False
     applied: tuple[float, float] = (NAN, NAN)
-
-
-class Proposal(NamedTuple):
-    """What a behaviour wants: where to head and at most how fast. Plain numbers, so that it passes through compiled code.
-
-    `heading` rad, world frame; `heading_rate` rad/s, how fast that heading moves; `side` +1 turn left, -1 right, 0 the short way;
-    `speed` m/s, an upper bound, 0 stops along the present curve; `weight` its share in a blend.
-    """
-
-    heading: float
-    heading_rate: float
-    side: float
-    speed: float
-    weight: float
 
 
 class Command(NamedTuple):

@@ -19,6 +19,8 @@ from numpy.typing import NDArray
 from steerkit.limits import held_stop_kernel
 from steerkit.platforms import Platform
 
+__all__ = ["Window", "no_overshoot_gain", "no_ringing_gain", "orbit_radius", "slowest_root", "stable_gain", "window"]
+
 Array = NDArray[np.float64]
 
 CAPTURE_MARGIN = 1.1  # the orbit is kept this much smaller than the capture disc
@@ -50,9 +52,19 @@ def split_delay(dead_time: float, period: float) -> tuple[int, float]:
 
 
 def no_overshoot_gain(period: float, dead_time: float = 0.0, motor_lag: float = 0.0) -> float:
-    """Return the highest proportional gain (1/s) at which the heading error does not change its sign.
+    """Return the highest proportional gain at which the heading error does not change its sign.
 
-    For the loop without prediction; with it, use dead_time = motor_lag = 0. m = 0 is Erbe & Zhang 1989 (from memory).
+    For the loop without prediction; with it, leave dead time and lag at 0. m = 0 is Erbe & Zhang 1989 (from memory).
+
+    Parameters
+    ----------
+    period : float, s
+    dead_time : float, s
+    motor_lag : float, s
+
+    Returns
+    -------
+    float, 1/s
     """
     d, m = split_delay(dead_time, period)
     if motor_lag > SHORT_LAG * period:
@@ -67,9 +79,19 @@ def no_overshoot_gain(period: float, dead_time: float = 0.0, motor_lag: float = 
 
 
 def stable_gain(period: float, dead_time: float = 0.0, motor_lag: float = 0.0) -> float:
-    """Return the proportional gain (1/s) below which the heading loop is stable.
+    """Return the proportional gain below which the heading loop is stable.
 
-    For the loop without prediction; with it, use dead_time = motor_lag = 0. m = 0 is Levin & May 1976 (from memory).
+    For the loop without prediction; with it, leave dead time and lag at 0. m = 0 is Levin & May 1976 (from memory).
+
+    Parameters
+    ----------
+    period : float, s
+    dead_time : float, s
+    motor_lag : float, s
+
+    Returns
+    -------
+    float, 1/s
     """
     d, m = split_delay(dead_time, period)
     if motor_lag > SHORT_LAG * period:
@@ -136,9 +158,23 @@ def lagged_stable(d: int, m: float, mu: float) -> float:
 def slowest_root(
     gain: float, integral_time: float, derivative_time: float, period: float, dead_time: float = 0.0, motor_lag: float = 0.0
 ) -> float:
-    """Return the size of the largest root of the heading loop with P, PI or PID (below 1: stable; 1 is the border).
+    """Return the size of the largest root of the heading loop with P, PI or PID: below 1 it is stable.
 
     The controller is gain (1 + T/Ti 1/(z-1) + Td/T (z-1)/z), T the period. Used to refuse gains that swing for ever.
+
+    Parameters
+    ----------
+    gain : float, 1/s
+    integral_time : float, s
+        Infinite for none.
+    derivative_time : float, s
+    period : float, s
+    dead_time : float, s
+    motor_lag : float, s
+
+    Returns
+    -------
+    float, no unit
     """
     d, m = split_delay(dead_time, period)
     denominator, numerator = lagged_loop(d, m, motor_lag / period if motor_lag > SHORT_LAG * period else 0.0)
@@ -151,19 +187,40 @@ def slowest_root(
 
 
 def orbit_radius(speed: float, gain: float, ceiling: float = math.inf) -> float:
-    """Return the radius (m) of the circle about the goal that a constant speed and a gain end in.
+    """Return the radius of the circle about the goal that a constant speed and a gain end in.
 
-    speed / min(ceiling, pi gain/2): on the circle the heading error is a right angle. Dead time leaves it as it is.
+    speed / min(ceiling, pi gain/2): on the circle the heading error is a right angle. Dead time leaves it as it is (derived).
+
+    Parameters
+    ----------
+    speed : float, m/s
+    gain : float, 1/s
+    ceiling : float, rad/s
+
+    Returns
+    -------
+    float, m
     """
     return speed / min(ceiling, math.pi * gain / 2.0)
 
 
 def no_ringing_gain(platform: Platform, speed: float, ceiling: float, predict: bool = True) -> float:
-    """Return the highest gain (1/s) at which the heading does not swing at a constant speed, the turn acceleration counted.
+    """Return the highest gain at which the heading does not swing at a constant speed, the turn acceleration counted.
 
     With prediction, T the period: from any turn rate w up to what the wheels leave of the ceiling, the fall by al T a step must
     not carry past the goal heading: e >= T w + X(w - al T), X the path of a held stop. e is asked/gain, and the wheels shrink what
-    is asked to w along the curve. Without prediction: no overshoot of the linear loop, and gain <= al/w.
+    is asked to w along the curve. Without prediction: no overshoot of the linear loop, and gain <= al/w (derived).
+
+    Parameters
+    ----------
+    platform : Platform
+    speed : float, m/s
+    ceiling : float, rad/s
+    predict : bool
+
+    Returns
+    -------
+    float, 1/s
     """
     asked = np.linspace(ceiling / SHARES, ceiling, SHARES)
     given = asked * np.minimum(1.0, platform.wheel_speed_limit / (speed + asked * platform.track_width / 2.0))
