@@ -419,9 +419,10 @@ def test_a_stop_along_the_curve_stays_on_its_circle_and_takes_the_held_stopping_
     before = inside_of(p, (v0, w0))
     curvature = before[1] / before[0]
     motion, pose, path = Motion(*before), (0.0, 0.0, 0.0), 0.0
-    while motion.speed > 0.0:
+    for _ in range(math.ceil(before[0] / (p.braking * p.period)) + 1):
         pose, path = arc(pose, motion, p.period), path + motion.speed * p.period
         motion, _ = limit(p, motion, (0.0, 0.0))
+    assert motion == (0.0, 0.0)
     assert math.isclose(path, held_stopping_distance(before[0], p.braking, p.period), rel_tol=1e-9)
     # one arc of the same length and curvature ends there too
     assert np.allclose(arc((0, 0, 0), (path, path * curvature), 1.0)[:2], pose[:2], rtol=0.0, atol=1e-9)
@@ -561,15 +562,16 @@ def test_wheels_that_bind_alone_run_at_their_limit(p, v0, w0, v, w):
 # limit in use: a straight run, and a wall
 
 
-def straight_run(p, distance, speed_within=held_speed_to_stop_within):
-    """Return the time and the end of a run from rest that is to stop after `distance`, under the limits."""
-    motion, pose, periods = Motion(0.0, 0.0), (0.0, 0.0, 0.0), 0
-    while periods == 0 or motion.speed > 0.0:
-        allowed = speed_within(distance - pose[0], p.braking, p.period)
+def straight_run(p, distance, motion=(0.0, 0.0), speed_within=held_speed_to_stop_within):
+    """Return the time and the end of a straight run under the limits, at the speed that can still be stopped within `distance`."""
+    pose = (0.0, 0.0, 0.0)
+    for periods in range(20_000):
+        allowed = speed_within(max(0.0, distance - pose[0]), p.braking, p.period)
         motion, _ = limit(p, motion, (allowed, 0.0))
+        if motion.speed * p.period < 1e-12:
+            return periods * p.period, pose[0]
         pose = arc(pose, motion, p.period)
-        periods += 1
-    return (periods - 1) * p.period, pose[0]
+    raise AssertionError(f"not at rest after {periods + 1} periods: at {pose[0]} m of {distance} m with {motion.speed} m/s")
 
 
 def trapezoid_time(distance, top, acceleration, braking):
@@ -608,27 +610,18 @@ def test_a_straight_run_of_any_robot_ends_where_it_should(p, distance):
     assert time >= trapezoid_time(distance, p.top_speed, p.acceleration, p.braking) - 2.0 * p.period
 
 
-def overrun(p, distance, speed_within):
-    """Return how far past a wall `distance` ahead the robot stops, driving at 1 m/s as the rule allows (negative: before it)."""
-    motion, pose = Motion(1.0, 0.0), (0.0, 0.0, 0.0)
-    while motion.speed > 0.0:
-        allowed = speed_within(max(0.0, distance - pose[0]), p.braking, p.period)
-        motion, _ = limit(p, motion, (allowed, 0.0))
-        pose = arc(pose, motion, p.period)
-        if motion.speed * p.period < 1e-12:
-            break
-    return pose[0] - distance
-
-
 @pytest.mark.parametrize(("period", "expected"), [(0.05, 0.025), (0.1, 0.05), (0.2, 0.1)])
 def test_the_square_root_overruns_by_half_a_period_and_ours_does_not(period, expected):
     # v <= sqrt(2 d a): Fox, Burgard & Thrun 1997 (from memory). In sampled time it overruns by v T/2 (derived; measured 0.025,
     # 0.05, 0.1 m at 1 m/s and 1 m/s^2), where the robot reads exactly its braking distance, 0.5 m
     p = replace(CART, speed_limit=1.0, braking=1.0, acceleration=1.0, period=period, reverse_speed_limit=0.0)
-    assert abs(overrun(p, 0.5, lambda d, a, _: math.sqrt(2.0 * d * a)) - expected) <= 1e-9
+    _, end = straight_run(p, 0.5, (1.0, 0.0), lambda d, a, _: math.sqrt(2.0 * d * a))
+    assert abs(end - 0.5 - expected) <= 1e-9
     for distance in np.linspace(1.0, 2.0, 41).tolist():
-        assert abs(overrun(p, distance, held_speed_to_stop_within)) <= 1e-9
-        assert -period <= overrun(p, distance, speed_to_stop_within) <= 1e-9
+        _, end = straight_run(p, distance, (1.0, 0.0))
+        assert abs(end - distance) <= 1e-9
+        _, end = straight_run(p, distance, (1.0, 0.0), speed_to_stop_within)
+        assert -period <= end - distance <= 1e-9
 
 
 # bad calls

@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import asyncio
 import contextlib
+import errno
 import fcntl
 import functools
 import gc
@@ -396,11 +397,19 @@ def test_pose_and_counters_and_commands_make_the_round_trip(board, line):
     assert board.heard() == b"wheels 0.480 0.520\n"  # and no echo of what the board said
 
 
-def test_line_is_set_to_its_speed(board, line):
-    settings = termios.tcgetattr(line.fd)
-    assert settings[4:6] == [termios.B115200, termios.B115200]
-    assert settings[2] & termios.CLOCAL
-    assert not settings[2] & termios.HUPCL
+def test_line_is_set_to_its_speed_and_hangs_nobody_up(board):
+    names = names_of(3)
+    settings = termios.tcgetattr(board.end)
+    settings[2] = (settings[2] | termios.HUPCL) & ~termios.CLOCAL
+    settings[4] = settings[5] = termios.B9600
+    termios.tcsetattr(board.end, termios.TCSANOW, settings)
+    line = names.Line(str(board.name), clock=names.Clock())
+    line.poll()
+    got = termios.tcgetattr(board.end)
+    line.close()
+    assert got[4:6] == [termios.B115200, termios.B115200]
+    assert got[2] & termios.CLOCAL
+    assert not got[2] & termios.HUPCL
 
 
 def test_partial_lines_wait_for_their_end(board, line):
@@ -529,14 +538,29 @@ def test_replug_is_survived(board, line):
     board.plug()
     line.clock.sleep(0.6)
     line.poll()
-    board.say(b"95 1.000 2.000 0.500\npose 3.000 1.500 2.500 0.750\nticks 3.010 7 9\nticks 3.060 9 12\n")
+    board.say(b"95 9.000 9.000 0.500\n")
+    line.poll()
+    assert line.pose == (1.0, 2.0, 0.5)  # the rest of the old line was not joined to the new
+    board.say(b"pose 13.000 1.500 2.500 0.750\nticks 13.010 7 9\nticks 13.060 9 12\n")
     line.clock.sleep(0.05)
     line.poll()
-    assert line.pose == (1.5, 2.5, 0.75)  # the rest of the old line was not joined to the new
-    assert line.pose_time == pytest.approx(line.clock())  # a new offset
-    assert line.counts == [2, 3]  # and no jump of the counters
+    assert line.pose == (1.5, 2.5, 0.75)
+    assert line.pose_time == pytest.approx(line.clock())
+    assert line.counts == [2, 3]  # no jump of the counters
     assert line.send(0.25, 0.5)
     assert board.heard() == b"wheels 0.250 0.500\n"
+
+
+@pytest.mark.parametrize("call", ["read", "write"])
+def test_adapter_that_fails_is_let_go(monkeypatch, board, line, call):
+    def fail(*arguments):
+        raise OSError(errno.ENODEV, "no such device")
+
+    board.say(b"pose 12.345 1.000 2.000 0.500\n")
+    monkeypatch.setattr(os, call, fail)
+    line.poll()
+    assert not line.send(0.5, 0.5)
+    assert line.fd is None
 
 
 def test_line_that_is_gone_is_not_tried_at_every_step(monkeypatch):
@@ -581,7 +605,9 @@ def test_commands_that_do_not_fit_are_dropped_and_none_is_cut(board, line):
     sent = [line.send(0.001 * k, -0.001 * k) for k in range(2000)]  # nobody listens: the buffer of the system fills up
     assert sent[0]
     assert not all(sent[-100:])
-    text = b""
+    last = command(max(k for k, out in enumerate(sent) if out)) + b"\n"
+    text = board.heard(last)
+    assert last in text  # what was said to be out is out, with nothing sent after it
     while not sent[-1] or len(sent) == 2000:
         if select.select([board.fd], [], [], 0.05)[0]:
             text += os.read(board.fd, 4096)

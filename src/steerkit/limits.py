@@ -22,7 +22,7 @@ WHEELS = int(Causes.WHEEL_SPEED_LIMIT)
 ACCELERATION = int(Causes.ACCELERATION_LIMIT)
 BRAKING = int(Causes.BRAKING_LIMIT)
 TURN_ACCELERATION = int(Causes.TURN_ACCELERATION_LIMIT)
-ROUNDING = 1e-12
+ROUNDING = 1e-9  # of a limit; less than this does not count as bound
 
 
 @kernel

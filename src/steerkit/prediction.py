@@ -155,7 +155,7 @@ def stop_end_kernel(
     if braking * abs(w) <= turn_acceleration * v:
         x, y, heading = arc_kernel(x, y, heading, path, w / v * path, 1.0)
         return x, y
-    span = v / braking
+    span = 2.0 * path / v
     pieces = 32
     for i in range(pieces):
         left = 1.0 - (i + 0.5) / pieces

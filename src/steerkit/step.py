@@ -67,6 +67,7 @@ Result = tuple[float, float, float, float, float, float, float, float, float, fl
 
 DRIVING, ARRIVED, HELD = int(Phase.DRIVING), int(Phase.ARRIVED), int(Phase.HELD)
 TOLD_TO_HOLD, BAD_POSE, STALE_POSE = int(Causes.TOLD_TO_HOLD), int(Causes.BAD_POSE), int(Causes.STALE_POSE)
+TURN_RATE_LIMIT = int(Causes.TURN_RATE_LIMIT)
 POSE_JUMPED, BAD_GOAL, BAD_CLOCK = int(Causes.POSE_JUMPED), int(Causes.BAD_GOAL), int(Causes.BAD_CLOCK)
 BAD_FIELD, BAD_MEMORY, OTHERS = int(Causes.BAD_FIELD), int(Causes.BAD_MEMORY), int(Causes.APPLIED_BY_OTHERS)
 ROBOT = float(Frame.ROBOT)
@@ -295,6 +296,8 @@ def step_kernel(settings: Sequence[float], memory: Sequence[float], measured: Se
             integral = 0.0
         else:
             asked, wanted_w = steer_kernel(error, rate, integral, gain, ceiling, integral_time, derivative_time)
+            if abs(asked) > ceiling:
+                causes |= TURN_RATE_LIMIT
         if (causes & BAD_POSE) != 0:
             top = min(top, max(last_v, 0.0))
     else:
