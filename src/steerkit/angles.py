@@ -64,7 +64,7 @@ def unwrap_row_kernel(angles: Array, out: Array) -> None:
     for i in range(len(angles)):
         angle = angles[i]
         step = angle - last
-        if abs(step) > PI:
+        if PI < abs(step) < math.inf:
             turns += math.floor((wrap_kernel(step) - step) / TURN + 0.5)
         out[i] = angle + turns * TURN
         if -math.inf < angle < math.inf:
@@ -144,7 +144,8 @@ def difference(target: ArrayLike, origin: ArrayLike) -> float | Array:
     >>> round(difference(-3.0, 3.0), 6)
     0.283185
     """
-    return wrap(np.subtract(np.asarray(target, np.float64), np.asarray(origin, np.float64)))
+    with np.errstate(invalid="ignore", over="ignore"):  # infinity less infinity is NaN, and NaN is what comes out
+        return wrap(np.subtract(np.asarray(target, np.float64), np.asarray(origin, np.float64)))
 
 
 def unwrap(angles: ArrayLike, axis: int = -1) -> Array:

@@ -65,8 +65,11 @@ def limit_kernel(
     bound = 0
     share = 1.0
     if v > top or v < -reverse:
-        share = (top if v > 0.0 else reverse) / abs(v)
         bound |= SPEED
+        if v > 0.0 or reverse > 0.0:
+            share = (top if v > 0.0 else reverse) / abs(v)
+        else:
+            v = 0.0  # forward only: what is left of a curve backwards is the turn
     if abs(w) * share > turn:
         share = turn / abs(w)
         bound |= TURN_RATE
@@ -77,12 +80,10 @@ def limit_kernel(
 
     low, high = reach_kernel(v0, faster, slower)
     v1 = clip_kernel(share * v, low, high)
-    if abs(v1) > abs(share * v) + ROUNDING:
-        bound |= BRAKING
-        if v * v1 > 0.0:
-            share = max(share, min(1.0, v1 / v))
-    elif abs(v1) < abs(share * v) - ROUNDING:
-        bound |= ACCELERATION
+    if abs(v1 - share * v) > ROUNDING:
+        bound |= BRAKING if (v1 - share * v) * v0 > 0.0 else ACCELERATION
+    if v * v1 > 0.0 and abs(v1) > abs(share * v):
+        share = max(share, min(1.0, v1 / v))
 
     aim = clip_kernel(share * w, -turn, turn)
     if v == 0.0 and w == 0.0 and v0 != 0.0:

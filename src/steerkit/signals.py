@@ -152,7 +152,8 @@ class Report(NamedTuple):
     """What a log needs to explain the command.
 
     `heading_error` rad, at the pose where this command takes effect; `distance` m, now; `pose` carried to now (m, m, rad);
-    `pose_age` s; `goal` m, in the world frame; `wanted` the motion that approach and heading law ask for, before the limits of the robot (m/s, rad/s).
+    `pose_age` s; `goal` m, in the world frame; `wanted` the motion that approach and heading law ask for, before the limits of the
+    robot (m/s, rad/s).
     """
 
     heading_error: float

@@ -86,9 +86,10 @@ def sound_kernel(memory: Sequence[float], rows: int) -> bool:
     for i in range(HEAD, HEAD + 3 * rows):
         if not usable_kernel(memory[i], FAR):
             return False
+    posed = not (abs(memory[X]) > FAR or abs(memory[Y]) > FAR or abs(memory[HEADING]) > FAR)  # NaN: none yet
     motion = usable_kernel(memory[SPEED], FAST) and usable_kernel(memory[TURN_RATE], FAST)
     base = usable_kernel(memory[BASE_SPEED], FAST) and usable_kernel(memory[BASE_TURN_RATE], FAST)
-    return motion and base and usable_kernel(memory[BASE_AGE], FAR) and usable_kernel(memory[INTEGRAL], FAR)
+    return posed and motion and base and usable_kernel(memory[BASE_AGE], FAR) and usable_kernel(memory[INTEGRAL], FAR)
 
 
 @kernel
@@ -116,149 +117,198 @@ def fresh_kernel(out: list[float], rows: int, time: float, v: float, w: float, p
 
 
 @kernel
+def clock_kernel(time: float, last: float, period: float, stale_after: float) -> tuple[float, bool]:
+    """Return the time since the last step, and whether the clock is good. A step on a bad clock counts as one period."""
+    since = time - last
+    good = usable_kernel(time, FAR) and 0.0 < since <= stale_after + period
+    return (since if good else period), good
+
+
+@kernel
+def seen_kernel(measured: Sequence[float]) -> tuple[float, float, float, int]:
+    """Return the measured motion (NaN where missing), the limit of this step (infinite for none), and what was wrong with them."""
+    v, w, limit = measured[8], measured[9], measured[10]
+    wrong = measured[14] != 0.0 or limit < 0.0
+    if limit != limit:
+        limit = math.inf
+    if v == v and not usable_kernel(v, FAST):
+        v, wrong = math.nan, True
+    if w == w and not usable_kernel(w, FAST):
+        w, wrong = math.nan, True
+    return v, w, max(limit, 0.0), BAD_FIELD if wrong else 0
+
+
+@kernel
+def before_kernel(memory: Sequence[float], measured: Sequence[float]) -> tuple[float, float, int]:
+    """Return the command before, ours or what the wheels were given instead."""
+    v, w = measured[12], measured[13]
+    if usable_kernel(v, FAST) and usable_kernel(w, FAST):
+        return v, w, OTHERS
+    return memory[SPEED], memory[TURN_RATE], BAD_FIELD if v == v or w == w else 0
+
+
+@kernel
+def pose_kernel(
+    memory: Sequence[float], measured: Sequence[float], since: float, period: float
+) -> tuple[float, float, float, float, bool, int]:
+    """Return the pose to go by (x, y, heading), its age, whether it is local, and what was wrong with the measured one.
+
+    The measured one where it is usable; else the last that was. A goal seen from the robot needs none: the robot is the origin.
+    """
+    time, x, y, heading, pose_time = measured[0], measured[1], measured[2], measured[3], measured[4]
+    age = 0.0 if pose_time != pose_time else time - pose_time
+    posed = usable_kernel(x, FAR) and usable_kernel(y, FAR) and usable_kernel(heading, FAR)
+    local = measured[7] == ROBOT and not posed
+    if not (-0.5 * period <= age <= FAR and (posed or local)):
+        return memory[X], memory[Y], memory[HEADING], memory[POSE_AGE] + since, False, BAD_POSE
+    if local:
+        return 0.0, 0.0, 0.0, max(age, 0.0), True, 0
+    return x, y, wrap_kernel(heading), max(age, 0.0), False, 0
+
+
+@kernel
 def jumped_kernel(
-    dx: float, dy: float, turned: float, span: float, fastest: float, spin: float, position_noise: float, heading_noise: float
+    memory: Sequence[float],
+    settings: Sequence[float],
+    x: float,
+    y: float,
+    heading: float,
+    span: float,
+    v: float,
+    w: float,
 ) -> bool:
-    """Say whether the limits over `span`, plus six standard deviations of noise, leave a change of pose unexplained."""
-    far = fastest * span + 6.0 * position_noise
-    return dx * dx + dy * dy > far * far or abs(turned) > spin * span + 6.0 * heading_noise
+    """Say whether the pose changed by more than the limits over `span`, plus six standard deviations of noise, explain.
+
+    (v, w) is the fastest motion known of, should it be beyond the limits.
+    """
+    dx = x - memory[X]
+    dy = y - memory[Y]
+    far = max(settings[3], settings[4], v) * span + 6.0 * settings[11]
+    turned = difference_kernel(heading, memory[HEADING])
+    return dx * dx + dy * dy > far * far or abs(turned) > max(settings[5], w) * span + 6.0 * settings[12]
+
+
+@kernel
+def goal_kernel(
+    memory: Sequence[float], measured: Sequence[float], x: float, y: float, heading: float, local: bool, radius: float
+) -> tuple[float, float, bool, bool]:
+    """Return the goal in the world, whether there is one, and whether it is new: moved by more than its disc."""
+    goal_x, goal_y, frame = measured[5], measured[6], measured[7]
+    if not (usable_kernel(goal_x, FAR) and usable_kernel(goal_y, FAR) and (frame == 0.0 or frame == ROBOT)):
+        return math.nan, math.nan, False, False
+    if frame == ROBOT:
+        goal_x, goal_y = to_world_kernel(x, y, heading, goal_x, goal_y)
+    moved, _ = bearing_kernel(memory[GOAL_X], memory[GOAL_Y], goal_x, goal_y)
+    return goal_x, goal_y, True, not (moved <= radius or (local and memory[GOAL_LOCAL] != 0.0))
+
+
+@kernel
+def turning_on_kernel(error: float, w: float, blur: float) -> float:
+    """Return the heading error; where the goal is behind within the noise, on the side to which the robot turns already."""
+    if abs(error) > PI - min(blur, 0.5) and error * w < 0.0:
+        return error - math.copysign(2.0 * PI, error)
+    return error
+
+
+@kernel
+def remember_kernel(
+    memory: Sequence[float],
+    out: list[float],
+    rows: int,
+    since: float,
+    last_v: float,
+    last_w: float,
+    dead_time: float,
+    lag: float,
+    stale_after: float,
+    v: float,
+    w: float,
+) -> None:
+    """Write the new command to the commands under way, and move the base of the modelled motion on.
+
+    `out` may be `memory`: each place is read before it is written.
+    """
+    base = memory[BASE_AGE] + since
+    base_age = min(base, stale_after)
+    base_v, base_w = motion_then_kernel(
+        memory, HEAD, rows, since, last_v, last_w, dead_time, lag, -base, -base_age, memory[BASE_SPEED], memory[BASE_TURN_RATE]
+    )
+    out[BASE_AGE], out[BASE_SPEED], out[BASE_TURN_RATE] = base_age, base_v, base_w
+    for i in range(rows - 1, 0, -1):
+        j = HEAD + 3 * i
+        out[j] = memory[j - 3] + since
+        out[j + 1] = memory[j - 2] if i > 1 else last_v
+        out[j + 2] = memory[j - 1] if i > 1 else last_w
+    out[HEAD], out[HEAD + 1], out[HEAD + 2] = 0.0, v, w
+    out[SPEED], out[TURN_RATE] = v, w
 
 
 @kernel
 def step_kernel(settings: Sequence[float], memory: Sequence[float], measured: Sequence[float], out: list[float]) -> Result:
     """Return the result of a step, and write the new memory to `out` (which may be `memory` itself)."""
     period, dead_time, lag, top, reverse, turn = settings[0], settings[1], settings[2], settings[3], settings[4], settings[5]
-    wheel, half_track, acceleration, braking = settings[6], settings[7], settings[8], settings[9]
-    turn_acceleration, position_noise, heading_noise = settings[10], settings[11], settings[12]
+    wheel, half_track, acceleration, braking, turn_acceleration = settings[6], settings[7], settings[8], settings[9], settings[10]
     capture_radius, stay_radius, stop_radius, aim_radius = settings[13], settings[14], settings[15], settings[16]
     cruise, ceiling, gain, integral_time, derivative_time = settings[17], settings[18], settings[19], settings[20], settings[21]
     predict, stale_after = settings[22], settings[23]
-    time, at_x, at_y, at_heading, pose_time, to_x, to_y, frame = (
-        measured[0],
-        measured[1],
-        measured[2],
-        measured[3],
-        measured[4],
-        measured[5],
-        measured[6],
-        measured[7],
-    )
-    seen_v, seen_w, limit, hold, applied_v, applied_w, garbage = (
-        measured[8],
-        measured[9],
-        measured[10],
-        measured[11],
-        measured[12],
-        measured[13],
-        measured[14],
-    )
     rows = (len(memory) - HEAD) // 3
     nan = math.nan
-    causes = 0
-
+    time = measured[0]
     if not sound_kernel(memory, rows):
         fresh_kernel(out, rows, time + period if usable_kernel(time, FAR) else nan, 0.0, 0.0, period, stale_after)
         return 0.0, 0.0, 0.0, 0.0, float(HELD), float(BAD_MEMORY), nan, nan, nan, nan, nan, math.inf, nan, nan, 0.0, 0.0
 
-    # The optional numbers: missing is missing, wrong is told and taken as the safer.
-    if garbage != 0.0:
-        causes |= BAD_FIELD
-    if limit == limit:
-        top = min(top, max(limit, 0.0))
-        if limit < 0.0:
-            causes |= BAD_FIELD
-    if seen_v == seen_v and not usable_kernel(seen_v, FAST):
-        seen_v = nan
-        causes |= BAD_FIELD
-    if seen_w == seen_w and not usable_kernel(seen_w, FAST):
-        seen_w = nan
-        causes |= BAD_FIELD
-
-    # The clock. A step on a wrong clock counts as one period later than the last.
-    clock = usable_kernel(time, FAR)
-    since = time - memory[TIME]
-    if not (clock and 0.0 < since <= stale_after + period):
-        since = period
-        causes |= BAD_CLOCK
-    share = min(since, period)
-
-    # The command before: ours, or what the wheels were given instead.
-    last_v, last_w = memory[SPEED], memory[TURN_RATE]
-    if usable_kernel(applied_v, FAST) and usable_kernel(applied_w, FAST):
-        last_v, last_w = applied_v, applied_w
-        causes |= OTHERS
-    elif applied_v == applied_v or applied_w == applied_w:
-        causes |= BAD_FIELD
-
-    # The pose and its age. A goal seen from the robot needs none: the robot is then the origin.
-    age = 0.0
-    if pose_time == pose_time:
-        age = time - pose_time if clock else nan
-    aged = -0.5 * period <= age <= FAR
-    age = max(age, 0.0)
-    posed = usable_kernel(at_x, FAR) and usable_kernel(at_y, FAR) and usable_kernel(at_heading, FAR)
-    local = frame == ROBOT and not posed
-    if aged and (posed or local):
-        x = at_x if posed else 0.0
-        y = at_y if posed else 0.0
-        heading = wrap_kernel(at_heading) if posed else 0.0
-    else:
-        causes |= BAD_POSE
-        local = False
-        age = memory[POSE_AGE] + since
-        x, y, heading = memory[X], memory[Y], memory[HEADING]
+    # What is known: the time, the command before, the pose and its age, the motion at that time, the goal.
+    since, clock = clock_kernel(time, memory[TIME], period, stale_after)
+    seen_v, seen_w, limit, causes = seen_kernel(measured)
+    last_v, last_w, trouble = before_kernel(memory, measured)
+    x, y, heading, age, local, pose_trouble = pose_kernel(memory, measured, since, period)
+    causes |= trouble | pose_trouble | (0 if clock else BAD_CLOCK)
     known = age <= stale_after + 1e-9
     if not known and age <= FAR:
         causes |= STALE_POSE
-
-    # The motion at that time: measured, or modelled through the commands under way.
-    v, w = memory[BASE_SPEED], memory[BASE_TURN_RATE]
-    base = -(memory[BASE_AGE] + since)
-    v, w = motion_then_kernel(memory, HEAD, rows, since, last_v, last_w, dead_time, lag, base, -min(age, stale_after), v, w)
-    if seen_v == seen_v:
-        v = seen_v
-    if seen_w == seen_w:
-        w = seen_w
-
+    v, w = motion_then_kernel(
+        memory,
+        HEAD,
+        rows,
+        since,
+        last_v,
+        last_w,
+        dead_time,
+        lag,
+        -(memory[BASE_AGE] + since),
+        -min(age, stale_after),
+        memory[BASE_SPEED],
+        memory[BASE_TURN_RATE],
+    )
+    v = seen_v if seen_v == seen_v else v
+    w = seen_w if seen_w == seen_w else w
     jumped = False
-    if (causes & BAD_POSE) == 0 and not local and memory[POSE_AGE] <= FAR:
+    if pose_trouble == 0 and not local and memory[POSE_AGE] <= FAR:
         span = abs(memory[POSE_AGE] + since - age) + period
-        fastest = max(settings[3], reverse, abs(v), abs(last_v))
-        spin = max(turn, abs(w), abs(last_w))
-        turned = difference_kernel(heading, memory[HEADING])
-        jumped = jumped_kernel(x - memory[X], y - memory[Y], turned, span, fastest, spin, position_noise, heading_noise)
-        if jumped:
-            causes |= POSE_JUMPED
-
-    # The goal in the world. One that moved by more than its disc is a new one.
-    goal_x, goal_y = to_x, to_y
-    aimed = usable_kernel(to_x, FAR) and usable_kernel(to_y, FAR) and (frame == 0.0 or frame == ROBOT)
+        fastest_v, fastest_w = max(abs(v), abs(last_v)), max(abs(w), abs(last_w))
+        jumped = jumped_kernel(memory, settings, x, y, heading, span, fastest_v, fastest_w)
+    goal_x, goal_y, aimed, new_goal = goal_kernel(memory, measured, x, y, heading, local, capture_radius)
+    if jumped:
+        causes |= POSE_JUMPED
     if not aimed:
-        goal_x, goal_y = nan, nan
         causes |= BAD_GOAL
-    elif frame == ROBOT and known:
-        goal_x, goal_y = to_world_kernel(x, y, heading, to_x, to_y)
-    moved = bearing_kernel(memory[GOAL_X], memory[GOAL_Y], goal_x, goal_y)[0]
-    new_goal = aimed and not (moved <= capture_radius or (local and memory[GOAL_LOCAL] != 0.0))
-    integral = 0.0 if new_goal or jumped else memory[INTEGRAL]
-    before = nan if jumped or local else memory[HEADING_BEFORE]
-    stopping = memory[STOPPING] != 0.0 and not new_goal
-    arrived = memory[PHASE] == ARRIVED and not new_goal
-
-    if hold != 0.0 and hold == hold:
+    if measured[11] != 0.0 and measured[11] == measured[11]:
         causes |= TOLD_TO_HOLD
     held = (causes & (TOLD_TO_HOLD | BAD_CLOCK | BAD_GOAL)) != 0 or not known
 
-    now_x, now_y, now_heading = nan, nan, nan
-    distance, error, rest = nan, nan, False
-    asked, wanted_v, wanted_w = 0.0, 0.0, 0.0
+    # Now, and when the new command takes effect.
+    now_x, now_y, now_heading, distance, error, rest = nan, nan, nan, nan, nan, False
     if known:
         now_x, now_y, now_heading, v, w = carry_kernel(
             memory, HEAD, rows, since, last_v, last_w, dead_time, lag, -age, 0.0, x, y, heading, v, w
         )
         rest = abs(v) + abs(w) * half_track < REST
-    if known and aimed:
-        distance = bearing_kernel(now_x, now_y, goal_x, goal_y)[0]
+        if aimed:
+            distance, _ = bearing_kernel(now_x, now_y, goal_x, goal_y)
+    stays = memory[PHASE] == ARRIVED and not new_goal and distance <= stay_radius
+    integral, before, stopping = 0.0, nan, False
+    asked, wanted_v, wanted_w = 0.0, 0.0, 0.0
     if not held:
         then_x, then_y, then_heading, v, w = carry_kernel(
             memory, HEAD, rows, since, last_v, last_w, dead_time, lag, 0.0, dead_time, now_x, now_y, now_heading, v, w
@@ -272,7 +322,7 @@ def step_kernel(settings: Sequence[float], memory: Sequence[float], measured: Se
             last_w,
             goal_x,
             goal_y,
-            stopping,
+            memory[STOPPING] != 0.0 and not new_goal,
             cruise,
             aim_radius,
             stop_radius,
@@ -283,97 +333,48 @@ def step_kernel(settings: Sequence[float], memory: Sequence[float], measured: Se
         )
         if predict == 0.0:
             then_heading = heading
-            bearing = bearing_kernel(x, y, goal_x, goal_y)[1]
+            _, bearing = bearing_kernel(x, y, goal_x, goal_y)
         error = difference_kernel(bearing, then_heading)
-        # With the goal behind, noise must not make the robot change its mind: within the noise of half a turn, it turns on.
-        blur = 6.0 * (heading_noise + position_noise / max(distance, capture_radius))
-        if abs(error) > PI - min(blur, 0.5) and error * last_w < 0.0:
-            error -= math.copysign(2.0 * PI, error)
-        rate = heading_rate_kernel(then_heading, before, since)
+        error = turning_on_kernel(error, last_w, 6.0 * (settings[12] + settings[11] / max(distance, capture_radius)))
         before = then_heading
-        if (arrived and distance <= stay_radius) or wanted_v == 0.0:
+        if stays:
             wanted_v = 0.0
-            integral = 0.0
-        else:
+        if wanted_v != 0.0:
+            integral = 0.0 if new_goal or jumped else memory[INTEGRAL]
+            rate = heading_rate_kernel(then_heading, nan if jumped or local else memory[HEADING_BEFORE], since)
             asked, wanted_w = steer_kernel(error, rate, integral, gain, ceiling, integral_time, derivative_time)
             if abs(asked) > ceiling:
                 causes |= TURN_RATE_LIMIT
-        if (causes & BAD_POSE) != 0:
-            top = min(top, max(last_v, 0.0))
-    else:
-        integral = 0.0
-        before = nan
-        stopping = False
 
-    v1, w1, bound = limit_kernel(
-        last_v,
-        last_w,
-        wanted_v,
-        wanted_w,
-        top,
-        reverse,
-        turn,
-        wheel,
-        half_track,
-        acceleration * share,
-        braking * share,
-        turn_acceleration * share,
-    )
+    # The command, within the limits. A pose that is carried on for want of a new one makes nothing faster.
+    top = min(top, limit)
+    if pose_trouble != 0:
+        top = min(top, max(last_v, 0.0))
+    share = min(since, period)
+    faster, slower, turning = acceleration * share, braking * share, turn_acceleration * share
+    v1, w1, bound = limit_kernel(last_v, last_w, wanted_v, wanted_w, top, reverse, turn, wheel, half_track, faster, slower, turning)
     causes |= bound
     if wanted_v != 0.0 and integral_time < math.inf:
         integral = clip_kernel(integrate_kernel(integral, error, asked, w1, share), -FAR, FAR)
     phase = DRIVING
     if held:
         phase = HELD
-    elif v1 == 0.0 and w1 == 0.0 and ((arrived and distance <= stay_radius) or (rest and distance <= capture_radius)):
+    elif v1 == 0.0 and w1 == 0.0 and (stays or (rest and distance <= capture_radius)):
         phase = ARRIVED
 
-    # The new memory; out may be memory, so each place is read before it is written.
-    base_age = min(memory[BASE_AGE] + since, stale_after)
-    base_v, base_w = motion_then_kernel(
-        memory, HEAD, rows, since, last_v, last_w, dead_time, lag, base, -base_age, memory[BASE_SPEED], memory[BASE_TURN_RATE]
-    )
-    for i in range(rows - 1, 0, -1):
-        j = HEAD + 3 * i
-        out[j] = memory[j - 3] + since
-        out[j + 1] = memory[j - 2] if i > 1 else last_v
-        out[j + 2] = memory[j - 1] if i > 1 else last_w
-    out[HEAD], out[HEAD + 1], out[HEAD + 2] = 0.0, v1, w1
-    out[TIME] = time if clock else memory[TIME] + period
-    out[SPEED], out[TURN_RATE] = v1, w1
-    out[X], out[Y], out[HEADING] = (nan, nan, nan) if local else (x, y, heading)
-    out[POSE_AGE] = math.inf if local else age
-    out[BASE_AGE], out[BASE_SPEED], out[BASE_TURN_RATE] = base_age, base_v, base_w
+    remember_kernel(memory, out, rows, since, last_v, last_w, dead_time, lag, stale_after, v1, w1)
+    out[TIME] = time if usable_kernel(time, FAR) else memory[TIME] + period
+    out[X], out[Y], out[HEADING], out[POSE_AGE] = (nan, nan, nan, math.inf) if local else (x, y, heading, age)
     if aimed:
-        out[GOAL_X], out[GOAL_Y] = (nan, nan) if local else (goal_x, goal_y)
-        out[GOAL_LOCAL] = 1.0 if local else 0.0
+        out[GOAL_X], out[GOAL_Y], out[GOAL_LOCAL] = (nan, nan, 1.0) if local else (goal_x, goal_y, 0.0)
     else:
         out[GOAL_X], out[GOAL_Y], out[GOAL_LOCAL] = memory[GOAL_X], memory[GOAL_Y], memory[GOAL_LOCAL]
-    out[INTEGRAL] = integral
-    out[HEADING_BEFORE] = before
-    out[STOPPING] = 1.0 if stopping else 0.0
-    out[PHASE] = float(phase)
-    out[SPARE] = 0.0
+    out[INTEGRAL], out[HEADING_BEFORE] = integral, before
+    out[STOPPING], out[PHASE], out[SPARE] = 1.0 if stopping else 0.0, float(phase), 0.0
 
     left, right = wheels_kernel(v1, w1, 2.0 * half_track)
-    return (
-        left,
-        right,
-        v1,
-        w1,
-        float(phase),
-        float(causes),
-        error,
-        distance,
-        now_x,
-        now_y,
-        now_heading,
-        age,
-        goal_x,
-        goal_y,
-        wanted_v,
-        wanted_w,
-    )
+    code, why = float(phase), float(causes)
+    return left, right, v1, w1, code, why, error, distance, now_x, now_y, now_heading, age, goal_x, goal_y, wanted_v, wanted_w
 
 
 @kernel
