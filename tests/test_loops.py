@@ -602,13 +602,14 @@ def test_commands_that_do_not_fit_are_dropped_and_none_is_cut(board, line):
     def command(k):
         return b"wheels %.3f %.3f" % (0.001 * k, -0.001 * k)
 
-    sent = [line.send(0.001 * k, -0.001 * k) for k in range(2000)]  # nobody listens: the buffer of the system fills up
-    assert sent[0]
-    assert not all(sent[-100:])
+    sent = [line.send(0.0, -0.0)]
+    while any(sent[-100:]):  # nobody listens: the buffer of the system, tens of kilobytes, fills up
+        assert len(sent) < 100_000
+        sent.append(line.send(0.001 * len(sent), -0.001 * len(sent)))
     last = command(max(k for k, out in enumerate(sent) if out)) + b"\n"
     text = board.heard(last)
     assert last in text  # what was said to be out is out, with nothing sent after it
-    while not sent[-1] or len(sent) == 2000:
+    while not sent[-1]:
         if select.select([board.fd], [], [], 0.05)[0]:
             text += os.read(board.fd, 4096)
         sent.append(line.send(0.001 * len(sent), -0.001 * len(sent)))
@@ -619,7 +620,7 @@ def test_commands_that_do_not_fit_are_dropped_and_none_is_cut(board, line):
     assert order == sorted(set(order))
     assert {k for k, out in enumerate(sent) if out} <= set(order)
     assert order[-1] == len(sent) - 1
-    assert len(order) < 0.9 * len(sent)  # and the rest was dropped
+    assert len(order) < len(sent) - 50  # and the rest was dropped
 
 
 def last_speed(text: bytes) -> float:

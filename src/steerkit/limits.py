@@ -65,7 +65,7 @@ def limit_kernel(
     bound = 0
     share = 1.0
     if v > top or v < -reverse:
-        bound |= SPEED
+        bound |= SPEED if v > top + ROUNDING or v < -reverse - ROUNDING else 0
         if v > 0.0 or reverse > 0.0:
             share = (top if v > 0.0 else reverse) / abs(v)
         else:
