@@ -116,7 +116,7 @@ def survives(mutant: tuple[str, str, int, str, str]) -> str:
     name, _, _, _, text = mutant
     with tempfile.TemporaryDirectory() as place:
         copied = Path(place)
-        for part in ("src", "tests", "docs"):
+        for part in ("src", "tests", "docs", ".ci"):
             shutil.copytree(ROOT / part, copied / part, ignore=shutil.ignore_patterns("__pycache__", "*.png"))
         for part in ("README.md", "DEVELOPERS.md", "pyproject.toml"):
             shutil.copy(ROOT / part, copied / part)
