@@ -24,6 +24,7 @@ ROOT = Path(__file__).parent.parent
 FILES = ("angles", "kinematics", "heading", "approach", "limits", "prediction", "step", "sizing")
 ASKED = ("angles", "kinematics", "heading", "approach")
 QUICK = ["test_angles.py", "test_kinematics.py", "test_limits.py", "test_controller.py", "test_properties.py", "test_heading.py"]
+FIRST = {"angles": ["test_angles.py"], "kinematics": ["test_kinematics.py"], "limits": ["test_limits.py"]}  # else test_heading.py
 SLOW = ["test_sizing.py", "test_window.py", "test_bad_calls.py", "test_ride.py", "test_house.py"]
 
 SWAPS = {
@@ -75,7 +76,7 @@ def mutated(tree: ast.Module, kind: str, index: int, rng: random.Random) -> ast.
     if kind == "operator":
         node.op = SWAPS[type(node.op)]()
     elif kind == "sign":
-        node.op = ast.UAdd() if isinstance(node.op, ast.USub) else ast.UAdd()
+        node.op = ast.UAdd()
     elif kind == "comparison":
         table = FLIPS if type(node.ops[0]) in FLIPS and rng.random() < 0.5 else SWAPS
         node.ops[0] = table[type(node.ops[0])]()
@@ -122,7 +123,9 @@ def survives(mutant: tuple[str, str, int, str, str]) -> str:
             shutil.copy(ROOT / part, copied / part)
         (copied / "src" / "steerkit" / f"{name}.py").write_text(text)
         clean = {"PYTHONPATH": str(copied / "src"), "STEERKIT_CACHE": str(copied / "cache")}
-        for lane, files, extra in (("quick", QUICK, {"NUMBA_DISABLE_JIT": "1"}), ("slow", QUICK + SLOW, {})):
+        plain = {"NUMBA_DISABLE_JIT": "1"}
+        first = FIRST.get(name, ["test_heading.py"])
+        for lane, files, extra in (("first", first, plain), ("quick", QUICK, plain), ("slow", QUICK + SLOW, {})):
             command = [sys.executable, "-m", "pytest", "-x", "-p", "no:cacheprovider", *(f"tests/{one}" for one in files)]
             command = [one for one in command if not one.startswith("tests/") or (copied / one).exists()]
             try:
@@ -151,7 +154,7 @@ def main() -> None:
     left = []
     with ThreadPoolExecutor(chosen.workers) as workers:
         for mutant, caught in zip(mutants, workers.map(survives, mutants), strict=True):
-            name, kind, line, source, text = mutant
+            name, kind, line, source, _ = mutant
             print(f"{'caught' if caught else 'SURVIVED':8}  {name}.py:{line}  {kind}  {source}  [{caught}]", flush=True)
             if not caught:
                 left.append(mutant)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 import math
 
 import numpy as np
@@ -103,7 +104,7 @@ def test_carrying_agrees_with_a_general_integrator(lag):
             return [v * math.cos(s[2]), v * math.sin(s[2]), w, (command[0] - v) / lag, (command[1] - w) / lag]
 
         state, cuts = np.array([*pose, *motion]), sorted({start, end, *(b for b in begins if start < b < end)})
-        for a, b in zip(cuts, cuts[1:], strict=False):
+        for a, b in itertools.pairwise(cuts):
             if lag == 0.0:
                 v, w = acting(0.5 * (a + b))
                 state[3:] = v, w

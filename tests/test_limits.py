@@ -298,6 +298,7 @@ def time_between(p, before, after):
         pytest.param(
             (0, 0), (0.15, 2), (0.1, 1), Causes.ACCELERATION_LIMIT | Causes.TURN_ACCELERATION_LIMIT, id="a start on a curve"
         ),
+        pytest.param((0.8, 0), (0.2, 0.4), (0.6, 0.4), Causes.BRAKING_LIMIT, id="still too fast, the turn not beyond the wish"),
         # limits broken already
         pytest.param((1.2, 0), (0.8, 0), (1, 0), Causes.BRAKING_LIMIT, id="was too fast"),
         pytest.param((-0.9, 0), (0.1, 0), (-0.7, 0), Causes.BRAKING_LIMIT, id="was too fast backwards"),
@@ -327,6 +328,29 @@ def test_limit_shrinks_the_speed_where_the_wheels_cannot_turn_back_in_time():
     got, causes = limit(cart, (0.7, 1.0), (0.8, 0.0))
     assert np.allclose(got, (0.72, 0.9), rtol=0.0, atol=NEAR)
     assert causes == Causes.TURN_ACCELERATION_LIMIT | Causes.WHEEL_SPEED_LIMIT
+
+
+def test_limit_names_braking_where_the_wheels_ask_for_a_slower_speed_than_a_period_reaches():
+    # by hand: 0.8 + 0.2 * 2 = 1.2 m/s, so 5/6 of the wish, 0.667 m/s; 0.75 can be reached; there the wheels leave 1.25 rad/s
+    cart = replace(CART, braking=0.5)
+    got, causes = limit(cart, (0.8, 1.0), (0.8, 2.0))
+    assert np.allclose(got, (0.75, 1.25), rtol=0.0, atol=NEAR)
+    assert causes == Causes.BRAKING_LIMIT | Causes.WHEEL_SPEED_LIMIT
+
+
+def test_limit_keeps_the_curve_while_it_brakes_to_a_lowered_limit():
+    # by hand: half of the wish keeps 0.4 m/s; 0.6 can be reached, and 0.6/0.8 of the turn goes with it
+    cart = replace(CART, speed_limit=0.4)
+    got, causes = limit(cart, (0.8, 0.4), (0.8, 0.4))
+    assert np.allclose(got, (0.6, 0.3), rtol=0.0, atol=NEAR)
+    assert causes == Causes.SPEED_LIMIT | Causes.BRAKING_LIMIT
+
+
+def test_a_stop_on_a_curve_that_turns_too_fast_comes_back_to_the_turn_rate_limit():
+    # by hand: along the curve 3 * 0.6/0.8 = 2.25 rad/s would follow; 2 is the limit and within reach
+    got, causes = limit(replace(CART, wheel_speed_limit=3.0), (0.8, 3.0), (0.0, 0.0))
+    assert np.allclose(got, (0.6, 2.0), rtol=0.0, atol=NEAR)
+    assert causes == Causes.BRAKING_LIMIT
 
 
 def test_a_period_that_crosses_zero_brakes_first_and_accelerates_with_what_is_left():
@@ -411,9 +435,9 @@ def test_limit_brakes_along_the_curve(p, v0, w0):
 
 
 @PATIENT
-@given(platforms(), st.floats(0.01, 1.0), st.floats(-1.0, 1.0))
+@given(platforms(), st.floats(0.01, 1.0), st.floats(-0.8, 0.8))
 def test_a_stop_along_the_curve_stays_on_its_circle_and_takes_the_held_stopping_distance(p, v0, w0):
-    p = replace(p, turn_acceleration=1000.0)  # ample
+    p = replace(p, turn_acceleration=1000.0)  # ample: 5 rad/s within the shortest period, 0.8 of 6 rad/s asked at most
     before = inside_of(p, (v0, w0))
     curvature = before[1] / before[0]
     motion, pose, path = Motion(*before), (0.0, 0.0, 0.0), 0.0

@@ -917,7 +917,7 @@ def test_worked_step_of_the_counters_is_right():
     millimetres = PI * 200 / 10240
     left, right = 371 * millimetres, 607 * millimetres
     path, turn = float(left + right) / 2000.0, float((right - left) / 580)
-    text = PAGE.read_text(encoding="utf-8")
+    text = " ".join(PAGE.read_text(encoding="utf-8").split())
     for printed in (f"371 counts, {left:.3f} mm", f"607 counts, {right:.3f} mm", f"{1000 * path:.3f} mm", f"{turn:.5f} rad"):
         assert printed in text
     x, y, heading = names_of(6).rolled((0.0, 0.0, 0.0), now=(365, 571), before=(65530, 65500))
@@ -965,7 +965,7 @@ def test_whole_counts_lose_nothing():
 # 7. Overridden
 
 
-def overridden(pose_age=0.0):
+def overridden():
     """Drive with a nurse at the stick from 2 to 4 s; return motions, decisions, sticks and true poses at each step."""
     names = names_of(7)
     clock = names.Clock()

@@ -3,9 +3,9 @@
 from __future__ import annotations
 
 import pytest
-from studies import above_the_stability, below_the_window, faster_than_workable, limit_storm, proposed_speeds, window_drives
 
 from steerkit import compiled
+from studies import above_the_stability, below_the_window, faster_than_workable, limit_storm, proposed_speeds, window_drives
 
 pytestmark = pytest.mark.skipif(not compiled.ON, reason="closed loops over many robots want the compiler")
 
