@@ -27,7 +27,7 @@ import numpy as np
 
 import steerkit
 from same_work import SAME, Array, Cart, address, build, differences, plain_row, prove
-from steerkit import Command, Controller, Decision, Measurement, Memory, Motion, Platform, Pose, Report, compiled
+from steerkit import Causes, Command, Controller, Decision, Measurement, Memory, Motion, Phase, Platform, Pose, Report, compiled
 from steerkit.compiled import kernel
 from steerkit.controller import PHASES, causes_of, record
 from steerkit.step import MEASURED, RESULT, step_kernel
