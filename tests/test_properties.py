@@ -8,6 +8,7 @@ farther than any braking needs, and headings away from half a turn.
 
 from __future__ import annotations
 
+import dataclasses
 import math
 
 import numpy as np
@@ -135,6 +136,33 @@ def test_turning_and_shifting_the_world_changes_nothing(
     got = step_once(controller, (shift_x, shift_y, heading + turn), there, motion)
     assert close(got.command, expected.command, 1e-9)
     assert close([got.report.heading_error, got.report.distance], [error, expected.report.distance], 1e-9)
+
+
+def scaled(controller, c):
+    """Return the same robot and task, every length `c` times as long."""
+    p = controller.platform
+    longer = {
+        name: c * getattr(p, name)
+        for name in ("radius", "track_width", "wheel_speed_limit", "speed_limit", "acceleration", "braking", "position_noise")
+    }
+    return Controller(dataclasses.replace(p, **longer), capture_radius=c * controller.capture_radius)
+
+
+SCALED = [(one, scaled(one, 2.0)) for one in POOL]
+
+
+@FEW
+@given(st.sampled_from(SCALED), lengths, lengths, angles, lengths, lengths, shares, shares)
+def test_all_lengths_doubled_double_the_speed_and_keep_the_turn_rate(pair, x, y, heading, goal_x, goal_y, forward, turning):
+    """Dimensional analysis (Buckingham 1914, from memory): no length is hidden in the laws. Powers of two scale exactly."""
+    small, large = pair
+    assert large.speed == 2.0 * small.speed
+    assert large.gain == small.gain
+    v, w = motion_of(small, forward, turning)
+    here = step_once(small, (x, y, heading), (goal_x, goal_y), (v, w))
+    there = step_once(large, (2.0 * x, 2.0 * y, heading), (2.0 * goal_x, 2.0 * goal_y), (2.0 * v, w))
+    assert close(there.command, [2.0 * one for one in here.command[:3]] + [here.command.turn_rate], 1e-12)
+    assert there.phase == here.phase
 
 
 @FEW
