@@ -556,6 +556,10 @@ def test_the_in_place_door_gives_the_same_bits():
         memory = decision.memory
         door.measurement[:7] = k * T, *pose, NAN, *goal
         result = door.step()
+        named = dict(zip(door.RESULT, result.tolist(), strict=True))
+        assert (named["left"], named["turn_rate"]) == (decision.command.left, decision.command.turn_rate)
+        assert named["wanted_turn_rate"] == decision.report.wanted.turn_rate
+        assert dict(zip(door.MEASURED, door.measurement.tolist(), strict=True))["goal_y"] == goal[1]
         assert result[:4].tobytes() == np.array(decision.command).tobytes()
         assert (int(result[4]), int(result[5])) == (decision.phase, decision.causes)
         assert np.array_equal(door.memory, memory.row, equal_nan=True)

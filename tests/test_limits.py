@@ -179,9 +179,11 @@ def test_held_speed_to_stop_within_is_the_exact_inverse(number, braking, period)
 @given(st.integers(1, 400), st.floats(0.3, 3.0), st.floats(0.005, 0.2))
 def test_held_speed_at_a_whole_number_of_steps_joins_both_branches(n, braking, period):
     step = braking * period
-    for share in (1.0 - 1e-13, 1.0, 1.0 + 1e-13):
-        got = held_speed_to_stop_within(step * period * n * (n + 1) / 2.0 * share, braking, period)
-        assert math.isclose(got, n * step, rel_tol=NEAR)
+    for off in (-1e-3, -1e-13, 0.0, 1e-13, 1e-3):
+        distance = step * period * n * (n + 1) / 2.0 * (1.0 + off)
+        got = held_speed_to_stop_within(distance, braking, period)
+        assert math.isclose(held_stopping_distance(got, braking, period), distance, rel_tol=NEAR)
+        assert math.isclose(got, n * step, rel_tol=NEAR + abs(off))
 
 
 @PATIENT
@@ -275,6 +277,9 @@ def time_between(p, before, after):
     ("before", "wanted", "expected", "causes"),
     [
         pytest.param((0, 0), (0.05, 0.5), (0.05, 0.5), Causes.NONE, id="within all limits"),
+        pytest.param((0.8, 1), (0.8, 1), (0.8, 1), Causes.NONE, id="at the limits of speed and wheels"),
+        pytest.param((0.8, 0), (0.8 + 5e-10, 0), (0.8, 0), Causes.NONE, id="too fast by too little to count"),
+        pytest.param((0.8, 0), (0.8 + 5e-9, 0), (0.8, 0), Causes.SPEED_LIMIT, id="too fast by just enough to count"),
         pytest.param((0, 0), (0.5, 0), (0.1, 0), Causes.ACCELERATION_LIMIT, id="a start"),
         pytest.param((0, 0), (-0.25, 0), (-0.1, 0), Causes.ACCELERATION_LIMIT, id="a start backwards"),
         pytest.param((0.5, 0), (0.1, 0), (0.3, 0), Causes.BRAKING_LIMIT, id="braking"),

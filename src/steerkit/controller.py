@@ -173,9 +173,9 @@ class Controller:
         """
         try:
             time, pose, goal, pose_time, frame, speed, turn_rate, limit, hold, applied = measurement
-            x, y, heading = pose
-            goal_x, goal_y = goal
-            applied_v, applied_w = applied
+            x, y, heading = pose  # type: ignore[misc]  # None, like anything else, goes the slower way below
+            goal_x, goal_y = goal  # type: ignore[misc]
+            applied_v, applied_w = applied  # type: ignore[misc]
             measured = FIFTEEN.unpack(
                 FIFTEEN.pack(
                     time, x, y, heading, pose_time, goal_x, goal_y, frame, speed, turn_rate, limit, hold, applied_v, applied_w, 0.0
@@ -218,11 +218,17 @@ class Controller:
 class InPlace:
     """A row of floats [memory | measurement | result], with named views, stepped in place.
 
-    `measurement` holds, in order: time, x, y, heading, pose_time, goal_x, goal_y, goal_frame, speed, turn_rate, speed_limit, hold,
-    applied speed, applied turn rate, and 0. `result` holds: left, right, speed, turn rate, phase, causes, heading error, distance,
-    x, y, heading, age of the pose, goal x, goal y, wanted speed, wanted turn rate.
+    `MEASURED` and `RESULT` name the places of `measurement` and `result`; the last of the former stays 0.
     """
 
+    MEASURED = (
+        *("time", "x", "y", "heading", "pose_time", "goal_x", "goal_y", "goal_frame", "speed", "turn_rate"),
+        *("speed_limit", "hold", "applied_speed", "applied_turn_rate", "garbage"),
+    )
+    RESULT = (
+        *("left", "right", "speed", "turn_rate", "phase", "causes", "heading_error", "distance", "x", "y", "heading"),
+        *("pose_age", "goal_x", "goal_y", "wanted_speed", "wanted_turn_rate"),
+    )
     __slots__ = ("_arguments", "_controller", "measurement", "memory", "result", "row")
 
     def __init__(self, controller: Controller, memory: Memory) -> None:

@@ -53,7 +53,8 @@ class Platform:
     period : float, s
         Time between two control steps.
     dead_time : float, s
-        From the instant that a pose is true to the instant that a command made from it moves the wheels. Log of a step.
+        From the instant that a pose is true (with `pose_time` told: from the step) to the instant that a command made from it
+        moves the wheels. Log of a step.
     motor_lag : float, s
         Time constant of the wheels behind their command, after the dead time: 63 % of a step. 0 if not seen.
     position_noise : float, m

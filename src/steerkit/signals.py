@@ -7,8 +7,9 @@ means missing. Everything is a value: it prints, compares, and can be stored and
 from __future__ import annotations
 
 import math
+from collections.abc import Sequence
 from enum import IntEnum, IntFlag
-from typing import NamedTuple
+from typing import Any, NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
@@ -28,6 +29,7 @@ __all__ = [
 ]
 
 NAN = math.nan
+Row = Sequence[float] | NDArray[Any]
 
 
 class Pose(NamedTuple):
@@ -82,19 +84,20 @@ class Measurement(NamedTuple):
     hold : bool
         Stand still: stop button, joystick, operator.
     applied : (float, float), m/s, rad/s
-        The motion that the wheels were given during the period that ended now, where something overrode ours.
+        The motion that the wheels were given during the period that ended now, where something overrode ours: a joystick, a
+        safety controller, a drive that stopped by itself while the loop hung (0, 0).
     """
 
-    time: float
-    pose: tuple[float, float, float] = (NAN, NAN, NAN)
-    goal: tuple[float, float] = (NAN, NAN)
-    pose_time: float = NAN
+    time: float | None
+    pose: Row | None = (NAN, NAN, NAN)
+    goal: Row | None = (NAN, NAN)
+    pose_time: float | None = NAN
     goal_frame: int = Frame.WORLD
-    speed: float = NAN
-    turn_rate: float = NAN
-    speed_limit: float = NAN
-    hold: float = False
-    applied: tuple[float, float] = (NAN, NAN)
+    speed: float | None = NAN
+    turn_rate: float | None = NAN
+    speed_limit: float | None = NAN
+    hold: bool | float | None = False
+    applied: Row | None = (NAN, NAN)
 
 
 class Command(NamedTuple):
