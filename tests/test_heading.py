@@ -201,8 +201,10 @@ def test_a_stop_never_leaves_its_circle_of_curvature(v, w, braking, turn_acceler
 def test_the_way_ahead_ends_at_the_near_edge_of_the_disc(distance, error, radius):
     way = way_ahead_kernel(distance, error, radius)
     x, y = distance * math.cos(error), distance * math.sin(error)
+    aside = x <= 0.0 or (abs(error) > 0.5 and abs(y) > radius)
+    assert (way == math.inf) == (aside and distance > radius)
     if way == math.inf:
-        assert x <= 0.0 or abs(y) > radius
+        pass
     elif way > 0.0 and abs(y) <= radius:
         assert math.hypot(x - way, y) == pytest.approx(radius, abs=1e-9 * (1.0 + distance))
         assert math.hypot(x - way * 0.999, y) > radius - 1e-9
@@ -238,6 +240,20 @@ def test_a_stop_along_the_curve_begins_inside_one_radius_and_goes_on_inside_the_
     assert approach(**around, stopping=True)[2:] == (0.0, True)
     inside = {"x": 0.18, "heading": PI / 2.0, "w0": 0.5 / 0.18, "goal": (0.0, 0.0)}
     assert approach(**inside)[2:] == (0.0, True)
+
+
+def test_a_stop_along_the_curve_begins_before_the_disc_is_reached():
+    """From 0.45 m/s it takes 0.1125 m: along a circle of 0.2 m that ends at (0.107, 0.031), inside a disc entered nowhere yet."""
+    assert held_stop_kernel(0.45, 1.0, 0.05) == pytest.approx(0.1125)
+    around = {"w0": 0.5 / 0.2, "goal": (0.05, 0.19)}
+    assert approach(**around)[2:] == (0.0, True)
+    assert approach(w0=0.5 / 0.2, goal=(0.0, 0.3))[2:] == (0.5, False)  # there it would end 0.29 m off
+
+
+def test_with_the_goal_ahead_it_steers_on_while_braking_even_if_it_comes_to_rest_beyond_the_near_edge():
+    speed, stopping = approach(goal=(0.16 + 0.10, 0.0))[2:]
+    assert not stopping
+    assert held_stop_kernel(speed, 1.0, 0.05) == pytest.approx(0.10)
 
 
 def test_at_rest_in_the_disc_it_stays_and_outside_it_goes():

@@ -92,6 +92,12 @@ def test_every_public_name_is_documented_each_parameter_with_its_unit(module):
             assert re.search(rf", {UNITS}(,|$)", line), f"{name}: {line}"
 
 
+@pytest.mark.parametrize("module", MODULES, ids=lambda module: module.__name__.split(".")[1])
+def test_modules_with_doors_say_which(module):
+    inner = ("checks", "compiled", "prediction", "approach", "step")
+    assert hasattr(module, "__all__") != (module.__name__.split(".")[1] in inner)
+
+
 @pytest.mark.parametrize("name", ["Platform", "Measurement", "Controller"])
 def test_every_field_and_argument_is_documented(name):
     thing = getattr(steerkit, name)
