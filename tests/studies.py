@@ -129,9 +129,9 @@ def allowed(robot: Robot, controller: Controller, distance: float) -> int:
     return math.ceil(span / s.period)
 
 
-def ringing(log: np.ndarray) -> float:
-    """Return how far the heading error went beyond its first zero, over where it began, while the heading law was steering."""
-    steering = np.flatnonzero(log[:, 10] == 0.0)
+def ringing(log: np.ndarray, radius: float = 0.0) -> float:
+    """Return how far the heading error went beyond its first zero, over where it began: while the law steered, up to capture."""
+    steering = np.flatnonzero((log[:, 10] == 0.0) | (log[:, 8] <= radius))
     e = log[: steering[0] if len(steering) else len(log), 7]
     if len(e) == 0:
         return 0.0
@@ -175,7 +175,7 @@ def window_drives(robots: int, starts: int, seed: int) -> Drives:
             steps += len(log)
             missed += not bool(np.any(log[:, 8] <= robot.capture_radius))
             short += log[-1, 5] != 1.0
-            ring = ringing(log)
+            ring = ringing(log, robot.capture_radius)
             rings += ring > 0.02
             worst = max(worst, ring)
     return Drives(robots, (robots - refused) * starts, refused, missed, short, rings, worst, steps)
@@ -328,8 +328,8 @@ def limit_storm(steps: int, seed: int) -> Storm:
                 hold=f[11] > 4.0,
                 applied=others,
             )
-            before = others if all(abs(x) < 1e4 for x in others) else memory.command
             decision = controller.step(memory, measurement)
+            before = others if Causes.APPLIED_BY_OTHERS in decision.causes else memory.command
             since = told - memory.time
             early = since / p.period if 0.0 < since < p.period else 1.0  # an early step may change as much less
             worst = max(worst, excess(controller, before, decision.command, measurement, early))

@@ -6,7 +6,7 @@ import math  # noqa: F401  the calls below are evaluated here
 
 import pytest
 
-from steerkit import Controller, Platform, angles, kinematics, limits  # noqa: F401
+from steerkit import Controller, Platform, angles, kinematics, limits, sizing  # noqa: F401
 
 CART = {
     "radius": 0.30,
@@ -245,13 +245,13 @@ BAD_CALLS = [
         "gain that circles",
         "controller(gain=0.5)",
         ValueError,
-        "gain=0.5 1/s circles the goal; give 1.274 to 4.444 1/s, or leave it out",
+        "gain=0.5 1/s circles the goal; give 1.273 to 4.444 1/s, or leave it out",
     ),
     (
         "gain that swings",
         "controller(gain=50.0)",
         ValueError,
-        "gain=50 1/s swings; give 1.274 to 4.444 1/s, or leave it out",
+        "gain=50 1/s swings; give 1.273 to 4.444 1/s, or leave it out",
     ),
     (
         "gain zero",
@@ -293,7 +293,7 @@ BAD_CALLS = [
         "stale after a minute",
         "controller(stale_after=60)",
         ValueError,
-        "stale_after=60 s must be <= 10 s; a pose that old says nothing",
+        "stale_after=60 s must be <= 20 s; a pose that old says nothing",
     ),
     (
         "start at no time",
@@ -306,6 +306,60 @@ BAD_CALLS = [
         "controller().start(0.0, motion=(math.inf, 0.0))",
         ValueError,
         "start(time=0.0, motion=(inf, 0.0)) must be finite; give seconds, m/s and rad/s",
+    ),
+    (
+        "start faster than the wheels can",
+        "controller().start(0.0, motion=(5.0, 0.0))",
+        ValueError,
+        "motion=(5.0, 0.0) turns a wheel at 5 m/s; it must be <= 2.2 m/s, twice wheel_speed_limit; give m/s and rad/s",
+    ),
+    (
+        "speed beyond all floats",
+        "controller(speed=10**400)",
+        ValueError,
+        "speed=inf m/s must be finite; give the constant speed, or leave it out for the fastest workable",
+    ),
+    (
+        "predict in words",
+        "controller(predict='no')",
+        TypeError,
+        "predict='no' must be True or False; True takes the error where the command takes effect",
+    ),
+    (
+        "period of nothing",
+        "platform(period=1e-13)",
+        ValueError,
+        "period=1e-13 s must be >= 0.0001 s; give the time between two control steps",
+    ),
+    (
+        "turn acceleration of nothing",
+        "platform(turn_acceleration=1e-20)",
+        ValueError,
+        "turn_acceleration=1e-20 rad/s^2 must be >= 1e-06 rad/s^2; give the steepest change of turn rate",
+    ),
+    (
+        "limit after no motion",
+        "limits.limit(platform(), (math.nan, 0.0), (1.0, 0.0))",
+        ValueError,
+        "before[0]=nan m/s must be finite; give the speed of the command before",
+    ),
+    (
+        "window of a negative disc",
+        "sizing.window(platform(), -1.0)",
+        ValueError,
+        "capture_radius=-1 m must be > 0; give the disc about the goal to come to rest in",
+    ),
+    (
+        "stable gain of no period",
+        "sizing.stable_gain(0.0)",
+        ValueError,
+        "period=0 s must be > 0; give the control period",
+    ),
+    (
+        "orbit of no gain",
+        "sizing.orbit_radius(1.0, 0.0)",
+        ValueError,
+        "gain=0 1/s must be > 0; give turn rate per heading error",
     ),
     (
         "file truncated",

@@ -202,7 +202,7 @@ def test_bad_data_that_stays_stops_the_robot_and_good_data_sends_it_on(fields, c
     assert robot.go().causes == Causes.NONE
 
 
-@pytest.mark.parametrize("name", ["goal-nan", "time-nan", "pose-old", "hold-in-words", "limit-in-words"])
+@pytest.mark.parametrize("name", ["goal-nan", "time-nan", "hold-in-words", "limit-in-words"])
 def test_a_stop_for_bad_data_uses_the_whole_braking(name):
     robot = cruising()
     speed = robot.motion[0]
@@ -417,9 +417,122 @@ def test_what_others_gave_the_wheels_replaces_what_we_sent():
 
 def test_a_motion_beyond_the_limits_comes_back_at_the_full_rate():
     robot = cruising()
-    decision = robot.go(applied=(2.0, 4.0))
-    assert decision.command.speed == pytest.approx(2.0 - 1.2 * T)
-    assert decision.command.turn_rate == pytest.approx(4.0 - 5.0 * T)
+    decision = robot.go(applied=(1.5, 2.8))
+    assert decision.command.speed == pytest.approx(1.5 - 1.2 * T)
+    assert decision.command.turn_rate == pytest.approx(2.8 - 5.0 * T)
+
+
+@pytest.mark.parametrize(
+    "applied", [(300.0, 0.0), (0.0, 90.0), (-5.0, 30.0), (2.3, 0.0), (math.inf, 0.0), (0.1, NAN), ("fast", 0.0)]
+)
+def test_a_motion_that_these_wheels_cannot_have_been_given_is_told_and_left_out(applied):
+    robot = cruising()
+    expected = robot.steering.step(robot.memory, Measurement(robot.time, robot.pose, robot.goal))
+    decision = robot.go(applied=applied)
+    assert Causes.BAD_FIELD in decision.causes
+    assert Causes.APPLIED_BY_OTHERS not in decision.causes
+    assert decision.command == expected.command
+
+
+def test_a_robot_measured_rolling_has_not_arrived():
+    robot = Robot(controller(platform=cart(dead_time=0.1)), goal=(0.1, 0.0))
+    assert robot.go(3).phase == Phase.ARRIVED
+    assert robot.go(speed=0.8).phase == Phase.DRIVING
+    assert robot.go(turn_rate=0.1).phase == Phase.DRIVING
+    decision = robot.go(speed=0.0, turn_rate=0.0)
+    assert decision.phase == Phase.ARRIVED
+    assert decision.command == (0.0, 0.0, 0.0, 0.0)
+
+
+def test_noise_does_not_move_a_robot_that_has_arrived_and_a_nudged_goal_does():
+    steering = Controller(cart(position_noise=0.0375, dead_time=0.0), capture_radius=0.3)
+    robot = Robot(steering, goal=(0.2, 0.0), delay=0)
+    assert robot.go(2).phase == Phase.ARRIVED
+    assert robot.go(pose=(-0.2, 0.0, 0.0)).phase == Phase.ARRIVED  # four standard deviations more than the disc
+    assert robot.go(goal=(0.29, 0.0)).phase == Phase.ARRIVED
+    decision = robot.go(5, goal=(0.445, 0.0))
+    assert decision.phase == Phase.DRIVING
+    assert decision.command.speed > 0.0
+    assert robot.go(80, goal=(0.445, 0.0)).phase == Phase.ARRIVED
+    assert math.dist(robot.pose[:2], (0.445, 0.0)) <= 0.3
+
+
+def test_a_hold_does_not_make_a_robot_forget_that_it_has_arrived():
+    steering = Controller(cart(position_noise=0.0375), capture_radius=0.3)
+    robot = Robot(steering, goal=(0.2, 0.0))
+    assert robot.go(3).phase == Phase.ARRIVED
+    assert robot.go(4, hold=True).phase == Phase.HELD
+    decision = robot.go(pose=(-0.2, 0.0, 0.0))
+    assert decision.phase == Phase.ARRIVED
+    assert decision.command.speed == 0.0
+
+
+def test_a_fast_robot_that_passes_its_goal_comes_back_and_does_not_circle():
+    """Weak brakes: the goal is passed at speed. The robot must turn back, not circle at speed until a stop happens to fit."""
+    platform = Platform(
+        radius=0.1,
+        track_width=0.12,
+        wheel_speed_limit=1.86,
+        speed_limit=1.5,
+        turn_rate_limit=6.0,
+        acceleration=3.0,
+        braking=0.3,
+        turn_acceleration=20.0,
+        period=0.05,
+        dead_time=0.0,
+    )
+    log = drive(Controller(platform, capture_radius=0.3), (-0.32, -0.71, -2.0), steps=1000, until=2)
+    assert log[-1, 5] == Phase.ARRIVED
+    touched = np.flatnonzero(log[:, 8] <= 0.3)[0]
+    assert log[touched, 3] > 1.0
+    assert np.all(np.diff(log[touched:, 3]) <= 1e-9)  # from then on it only brakes
+    assert np.max(np.hypot(log[touched:, 0], log[touched:, 1])) < 0.7
+
+
+def test_an_old_pose_does_not_replace_a_newer_one():
+    robot = cruising()
+    decision = robot.go(pose=(0.0, 0.0, 2.0), pose_time=0.0)
+    assert Causes.STALE_POSE in decision.causes
+    assert decision.phase == Phase.DRIVING
+    assert decision.report.pose[0] == pytest.approx(robot.pose[0] - T * robot.steering.speed)
+    assert robot.go(pose=None).phase == Phase.DRIVING
+
+
+def test_a_pose_time_that_is_no_number_does_not_make_a_pose_fresh():
+    steering = controller()
+    memory = steering.start(0.0)
+    for k in range(20):
+        decision = steering.step(memory, Measurement(k * T, (0.0, 0.0, 0.0), (5.0, 0.0), pose_time="-9.0 s"))
+        memory = decision.memory
+    assert decision.phase == Phase.HELD
+    assert Causes.BAD_POSE | Causes.BAD_FIELD in decision.causes
+
+
+def test_two_steps_within_the_least_time_there_is_are_finite():
+    steering = controller()
+    decision = steering.step(steering.start(0.0), Measurement(0.0, (0.0, 0.0, 0.0), (2.0, 1.0)))
+    decision = steering.step(decision.memory, Measurement(5e-324, (0.0, 0.0, 0.1), (2.0, 1.0)))
+    assert all(map(math.isfinite, decision.command))
+
+
+def test_a_memory_is_its_own_copy_whatever_the_row_looks_like():
+    steering = controller()
+    start = steering.start(0.0)
+    log = np.repeat(start.row, 2)
+    memory = Memory(log[::2])
+    assert memory == start
+    log[:] = 0.0  # still writable, and not shared
+    assert memory == start
+    assert steering.step(memory, Measurement(0.0, (0.0, 0.0, 0.0), (1.0, 1.0))).phase == Phase.DRIVING
+
+
+@pytest.mark.parametrize(
+    "pose", [b"abc", bytearray(b"abc"), {1.0, 2.0, 3.0}, {1: 0, 2: 0, 3: 0}, (1j, 0, 0), np.zeros(300_000), range(3)]
+)
+def test_what_only_looks_like_three_numbers_is_no_pose(pose):
+    robot = cruising()
+    decision = robot.go(pose=pose)
+    assert Causes.BAD_POSE | Causes.BAD_FIELD in decision.causes
 
 
 # Goals seen from the robot

@@ -12,7 +12,7 @@ from hypothesis import strategies as st
 from scipy.integrate import solve_ivp
 
 from steerkit import Platform
-from steerkit.approach import bearing_kernel, constant_speed_kernel, way_ahead_kernel
+from steerkit.approach import CAPTURED, ON_THE_WAY, STOPPING, bearing_kernel, constant_speed_kernel, way_ahead_kernel
 from steerkit.heading import HeadingLaw, HeadingMemory, heading_rate_kernel, steer
 from steerkit.limits import held_stop_kernel, limit
 from steerkit.prediction import carry_kernel, coast_kernel, motion_then_kernel, stop_end_kernel
@@ -215,14 +215,14 @@ def test_the_way_ahead_ends_at_the_near_edge_of_the_disc(distance, error, radius
         assert distance <= radius * (1.0 + 1e-9)
 
 
-def approach(x=0.0, y=0.0, heading=0.0, v0=0.5, w0=0.0, goal=(5.0, 0.0), stopping=False):
-    return constant_speed_kernel(x, y, heading, v0, w0, *goal, stopping, 0.5, 0.16, 0.19, 0.2, 1.0, 5.0, 0.05)
+def approach(x=0.0, y=0.0, heading=0.0, v0=0.5, w0=0.0, goal=(5.0, 0.0), progress=ON_THE_WAY):
+    return constant_speed_kernel(x, y, heading, v0, w0, *goal, progress, 0.5, 0.16, 0.19, 0.2, 0.18, 1.0, 5.0, 0.05)
 
 
 def test_far_from_the_goal_it_cruises():
-    assert approach() == (0.0, 5.0, 0.5, False)
-    assert approach(goal=(-5.0, 0.1))[2:] == (0.5, False)
-    assert approach(goal=(0.0, 0.3))[2:] == (0.5, False)  # off to the side nothing brakes
+    assert approach() == (0.0, 5.0, 0.5, ON_THE_WAY)
+    assert approach(goal=(-5.0, 0.1))[2:] == (0.5, ON_THE_WAY)
+    assert approach(goal=(0.0, 0.3))[2:] == (0.5, ON_THE_WAY)  # off to the side nothing brakes
 
 
 def test_it_brakes_just_in_time_to_end_at_the_near_edge():
@@ -236,29 +236,45 @@ def test_a_stop_along_the_curve_begins_inside_one_radius_and_goes_on_inside_the_
     side = 0.195
     # circling the goal at 0.195 m: the stop along the circle stays there
     around = {"x": side, "heading": PI / 2.0, "w0": 0.5 / side, "goal": (0.0, 0.0)}
-    assert approach(**around)[2:] == (0.5, False)
-    assert approach(**around, stopping=True)[2:] == (0.0, True)
+    assert approach(**around)[3] == CAPTURED
+    assert approach(**around, progress=STOPPING)[2:] == (0.0, STOPPING)
     inside = {"x": 0.18, "heading": PI / 2.0, "w0": 0.5 / 0.18, "goal": (0.0, 0.0)}
-    assert approach(**inside)[2:] == (0.0, True)
+    assert approach(**inside)[2:] == (0.0, STOPPING)
+    for turns in (1.0, -1.0):  # from a speed whose stop goes round more than half a turn, the whole circle must lie inside
+        circle = {"x": turns * 0.10, "heading": PI / 2.0, "v0": 1.5, "w0": turns * 1.5 / 0.10}
+        assert approach(**circle, goal=(0.0, 0.0))[2:] == (0.0, STOPPING)
+        assert approach(**circle, goal=(0.0, 0.085))[2:] == (0.0, STOPPING)
+        assert approach(**circle, goal=(0.0, 0.095))[3] == CAPTURED
+
+
+def test_a_disc_that_was_passed_through_is_come_back_to_slowly():
+    """Having touched the disc it never goes faster than it can stop from at that distance."""
+    assert approach(goal=(-0.5, 0.0))[2:] == (0.5, ON_THE_WAY)
+    speed, progress = approach(goal=(-0.2, 0.2), progress=CAPTURED)[2:]
+    assert progress == CAPTURED
+    assert held_stop_kernel(speed, 1.0, 0.05) == pytest.approx(math.hypot(0.2, 0.2) - 0.16)
+    assert approach(goal=(-0.10, 0.15))[3] == CAPTURED  # inside 0.2 m
+    assert approach(goal=(-0.10, 0.05))[2:] == (0.0, CAPTURED)  # too deep inside to go anywhere
 
 
 def test_a_stop_along_the_curve_begins_before_the_disc_is_reached():
     """From 0.45 m/s it takes 0.1125 m: along a circle of 0.2 m that ends at (0.107, 0.031), inside a disc entered nowhere yet."""
     assert held_stop_kernel(0.45, 1.0, 0.05) == pytest.approx(0.1125)
-    around = {"w0": 0.5 / 0.2, "goal": (0.05, 0.19)}
-    assert approach(**around)[2:] == (0.0, True)
-    assert approach(w0=0.5 / 0.2, goal=(0.0, 0.3))[2:] == (0.5, False)  # there it would end 0.29 m off
+    around = {"w0": 0.5 / 0.2, "goal": (0.05, 0.194)}
+    assert approach(**around)[2:] == (0.0, STOPPING)
+    assert approach(w0=0.5 / 0.2, goal=(0.0, 0.3))[2:] == (0.5, ON_THE_WAY)  # there it would end 0.29 m off
 
 
 def test_with_the_goal_ahead_it_steers_on_while_braking_even_if_it_comes_to_rest_beyond_the_near_edge():
-    speed, stopping = approach(goal=(0.16 + 0.10, 0.0))[2:]
-    assert not stopping
+    speed, progress = approach(goal=(0.16 + 0.10, 0.0))[2:]
+    assert progress == ON_THE_WAY
     assert held_stop_kernel(speed, 1.0, 0.05) == pytest.approx(0.10)
 
 
 def test_at_rest_in_the_disc_it_stays_and_outside_it_goes():
-    assert approach(v0=0.0, goal=(0.199, 0.0))[2:] == (0.0, True)
-    assert approach(v0=0.0, goal=(-0.1, 0.1))[2:] == (0.0, True)
+    assert approach(v0=0.0, goal=(0.179, 0.0))[2:] == (0.0, STOPPING)
+    assert approach(v0=0.0, goal=(0.181, 0.0))[2] > 0.0  # inside the disc, but not deep enough for the noise
+    assert approach(v0=0.0, goal=(-0.1, 0.1))[2:] == (0.0, STOPPING)
     assert approach(v0=0.0, goal=(0.201, 0.0))[2] > 0.0
     assert approach(v0=0.0, goal=(-0.201, 0.0))[2] == 0.5
 

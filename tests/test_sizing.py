@@ -175,7 +175,15 @@ def test_orbit_radius_is_that_of_the_library_s_own_loop():
 # O1: omega = K wrap(e) ends in the circle 2V/(pi K): V = 1, K = 2: 0.318309886 (derived; Bendixson-Dulac).
 def test_constant_speed_orbit_is_the_derived_circle():
     robot = Controller(linear_robot(FINE), capture_radius=0.2).unchecked(
-        cruise=1.0, gain=2.0, ceiling=50.0, top_turn_rate=50.0, capture_radius=1e-9, stop_radius=1e-9, aim_radius=1e-9, braking=1e9
+        cruise=1.0,
+        gain=2.0,
+        ceiling=50.0,
+        top_turn_rate=50.0,
+        capture_radius=1e-9,
+        stop_radius=1e-9,
+        aim_radius=1e-9,
+        rest_radius=1e-9,
+        braking=1e9,
     )
     for start in ((3.0, 0.0, 2.0), (0.35, 0.0, 1.4), (0.5, 0.5, -2.0)):
         log = drive(robot, start, motion=(1.0, 0.0), steps=20_000)

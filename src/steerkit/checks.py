@@ -17,21 +17,28 @@ def shown(value: object, unit: str = "") -> str:
 
 def rounded_down(value: float, digits: int = 4) -> float:
     """Return a positive number cut to some digits, so that what a sentence proposes can be asked for."""
+    near = float(f"{value:.{digits}g}")
     unit = 10.0 ** (math.floor(math.log10(value)) - digits + 1)
-    return float(f"{math.floor(value / unit) * unit:.{digits}g}")
+    return near if near <= value else float(f"{near - unit:.{digits}g}")
 
 
 def rounded_up(value: float, digits: int = 4) -> float:
-    """Return a positive number raised to some digits."""
+    """Return a number >= 0 raised to some digits."""
+    if value == 0.0:
+        return 0.0
+    near = float(f"{value:.{digits}g}")
     unit = 10.0 ** (math.floor(math.log10(value)) - digits + 1)
-    return float(f"{math.ceil(value / unit) * unit:.{digits + 1}g}")
+    return near if near >= value else float(f"{near + unit:.{digits}g}")
 
 
 def check_number(name: str, value: object, unit: str, repair: str) -> float:
     """Return `value` as a finite float."""
     if isinstance(value, bool) or not isinstance(value, numbers.Real):
         raise TypeError(f"{name}={value!r} must be a number in {unit}; {repair}")
-    number = float(value)
+    try:
+        number = float(value)
+    except OverflowError:
+        number = math.inf
     if not math.isfinite(number):
         raise ValueError(f"{name}={shown(number, unit)} must be finite; {repair}")
     return number
@@ -53,7 +60,7 @@ def check_not_negative(name: str, value: object, unit: str, repair: str) -> floa
 
 def check_at_most(name: str, value: float, unit: str, most: float, repair: str) -> float:
     if value > most:
-        raise ValueError(f"{name}={shown(value, unit)} must be <= {shown(most, unit)}; {repair}")
+        raise ValueError(f"{name}={shown(value, unit)} must be <= {shown(rounded_down(most, 6), unit)}; {repair}")
     return value
 
 

@@ -8,8 +8,6 @@ from __future__ import annotations
 
 import functools
 import math
-from struct import Struct
-from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -17,19 +15,19 @@ from numpy.typing import NDArray
 from steerkit import compiled, sizing
 from steerkit.checks import check_above_zero, check_not_negative, rounded_down, rounded_up, shown
 from steerkit.platforms import Platform
+from steerkit.reading import FIFTEEN, PLAIN, numbers
 from steerkit.signals import HEAD, Causes, Command, Decision, Measurement, Memory, Motion, Phase, Pose, Report
-from steerkit.step import FAR, FAST, MEASURED, RESULT, Settings, fresh_kernel, in_place_kernel, step_kernel
+from steerkit.step import BELIEVED, FAR, MEASURED, RESULT, Settings, fresh_kernel, in_place_kernel, step_kernel
 
 __all__ = ["Controller", "InPlace"]
 
 Array = NDArray[np.float64]
 
-FIFTEEN = Struct("15d")  # turns ints, float32 and bools into floats, and refuses strings, in a third of the time of float()
 NAN = math.nan
 PHASES = tuple(Phase)
-FLOAT64 = np.dtype(np.float64)
 record = tuple.__new__  # fills a named tuple past its own constructor, in two thirds of the time
 causes_of = functools.cache(Causes)  # at most 2**15 of them
+PRINTED = 1e-3  # a gain that was read from a sentence, four digits, is one of the window
 NOISE_RADII = 8.0  # standard deviations of position that the capture radius must span
 
 
@@ -85,6 +83,8 @@ class Controller:
             raise TypeError(f"platform={platform!r} must be a Platform; build one from the robot's measured numbers")
         self.platform = platform
         self.capture_radius = checked_radius(platform, capture_radius)
+        if not isinstance(predict, (bool, np.bool_)):
+            raise TypeError(f"predict={predict!r} must be True or False; True takes the error where the command takes effect")
         self.window = sizing.window(platform, self.capture_radius, checked_speed(platform, speed), bool(predict))
         cruise = self.window.fastest if speed is None else float(speed)
         check_window(platform, self.window, cruise, self.capture_radius)
@@ -115,6 +115,7 @@ class Controller:
                 derivative_time=float(derivative_time),
                 predict=float(bool(predict)),
                 stale_after=checked_age(platform, stale_after),
+                rest_radius=self.capture_radius - 2.0 * platform.position_noise,
             )
         )
 
@@ -151,11 +152,18 @@ class Controller:
     def start(self, time: float, motion: tuple[float, float] = (0.0, 0.0)) -> Memory:
         """Return the memory to begin with at `time` (s), for a robot at rest or already in motion (m/s, rad/s)."""
         began, v, w = float(time), float(motion[0]), float(motion[1])
-        if not (abs(began) <= FAR and abs(v) <= FAST and abs(w) <= FAST):
+        if not (abs(began) <= FAR and math.isfinite(v) and math.isfinite(w)):
             raise ValueError(f"start(time={time!r}, motion={motion!r}) must be finite; give seconds, m/s and rad/s")
+        wheel = abs(v) + abs(w) * self.settings.half_track
+        most = BELIEVED * self.settings.wheel_speed
+        if wheel > most:
+            raise ValueError(
+                f"motion={motion!r} turns a wheel at {shown(wheel, 'm/s')}; it must be <= {shown(rounded_down(most), 'm/s')}, "
+                "twice wheel_speed_limit; give m/s and rad/s"
+            )
         row = np.empty(self._size)
         fresh_kernel(row, self._rows, began, v, w, self.settings.period, self.settings.stale_after)  # type: ignore[arg-type]
-        return Memory(row)
+        return Memory.of(row)
 
     def step(self, memory: Memory, measurement: Measurement) -> Decision:
         """Return what to do now. Pure; never raises on data.
@@ -176,6 +184,8 @@ class Controller:
             x, y, heading = pose  # type: ignore[misc]  # None, like anything else, goes the slower way below
             goal_x, goal_y = goal  # type: ignore[misc]
             applied_v, applied_w = applied  # type: ignore[misc]
+            if not (pose.__class__ in PLAIN and goal.__class__ in PLAIN and applied.__class__ in PLAIN):
+                raise TypeError
             measured = FIFTEEN.unpack(
                 FIFTEEN.pack(
                     time, x, y, heading, pose_time, goal_x, goal_y, frame, speed, turn_rate, limit, hold, applied_v, applied_w, 0.0
@@ -184,7 +194,7 @@ class Controller:
         except Exception:  # anything at all may stand in a measurement
             measured = numbers(measurement)
         row = memory.row if isinstance(memory, Memory) else None
-        if row is None or row.shape != (self._size,) or row.dtype != FLOAT64:
+        if row is None or row.shape != (self._size,):
             row = np.full(self._size, NAN)
         out = np.empty(self._size)
         if compiled.ON:
@@ -194,7 +204,7 @@ class Controller:
             r = step_kernel(self._plain, row.tolist(), measured, kept)
             out[:] = kept
         report = record(Report, (r[6], r[7], record(Pose, r[8:11]), r[11], r[12:14], record(Motion, r[14:])))
-        return record(Decision, (record(Command, r[:4]), PHASES[int(r[4])], causes_of(int(r[5])), report, Memory(out)))
+        return record(Decision, (record(Command, r[:4]), PHASES[int(r[4])], causes_of(int(r[5])), report, Memory.of(out)))
 
     def in_place(self, time: float, motion: tuple[float, float] = (0.0, 0.0)) -> InPlace:
         """Return the door for fast loops and recorders: one row of floats that `step()` reads and writes."""
@@ -205,10 +215,10 @@ class Controller:
 
     def __str__(self) -> str:
         w = self.window
-        kept = "the fastest workable" if self.speed == w.fastest else f"the fastest workable is {w.fastest:.3g} m/s"
+        kept = "the fastest workable" if self.speed == w.fastest else f"the fastest workable is {rounded_down(w.fastest):g} m/s"
         lines = [
-            f"Constant speed {self.speed:.3g} m/s ({kept}; bound by {w.bound}).",
-            f"Heading gain {self.gain:.3g} 1/s; those from {w.low:.3g} to {w.high:.3g} 1/s work.",
+            f"Constant speed {rounded_down(self.speed):g} m/s ({kept}; bound by {w.bound}).",
+            f"Heading gain {self.gain:.4g} 1/s; those from {w.low:.4g} to {w.high:.4g} 1/s work.",
             f"Turn rate up to {w.ceiling:.3g} rad/s.",
             "Unguarded: no range sensor; nothing here looks for obstacles.",
         ]
@@ -252,65 +262,13 @@ class InPlace:
         return self.result
 
 
-def numbers(measurement: Any) -> tuple[float, ...]:
-    """Return the fifteen numbers of any measurement: missing becomes NaN, what is no number the safer, and is told."""
-    wrong = False
-
-    def one(value: Any, otherwise: float = NAN) -> float:
-        nonlocal wrong
-        if value is None:
-            return NAN
-        try:
-            if isinstance(value, (str, bytes)) or np.size(value) != 1:
-                raise TypeError
-            return float(np.asarray(value).astype(np.float64).item())
-        except Exception:
-            wrong = True
-            return otherwise
-
-    def several(values: Any, count: int) -> list[float]:
-        nonlocal wrong
-        if values is None:
-            return [NAN] * count
-        try:
-            if isinstance(values, (str, bytes)):
-                raise TypeError
-            found = [one(value) for value in values]
-        except Exception:
-            found = []
-        if len(found) != count:
-            wrong = True
-            return [NAN] * count
-        return found
-
-    try:
-        fields = [getattr(measurement, name) for name in Measurement._fields]
-    except Exception:
-        wrong = True
-        fields = [None] * len(Measurement._fields)
-    time, pose, goal, pose_time, frame, speed, turn_rate, limit, hold, applied = fields
-    return (
-        one(time),
-        *several(pose, 3),
-        one(pose_time),
-        *several(goal, 2),
-        one(frame),
-        one(speed),
-        one(turn_rate),
-        one(limit, otherwise=0.0),
-        one(hold, otherwise=1.0),
-        *several(applied, 2),
-        float(wrong),
-    )
-
-
 def checked_radius(platform: Platform, capture_radius: object) -> float:
     radius = check_above_zero("capture_radius", capture_radius, "m", "give the disc about the goal to come to rest in")
     least = NOISE_RADII * platform.position_noise
     if radius < least:
         raise ValueError(
-            f"capture_radius={shown(radius, 'm')} must be >= {shown(least, 'm')}, eight standard deviations of position_noise; "
-            "widen the disc or measure the pose better"
+            f"capture_radius={shown(radius, 'm')} must be >= {shown(rounded_up(least), 'm')}, eight standard deviations of "
+            "position_noise; widen the disc or measure the pose better"
         )
     return radius
 
@@ -322,7 +280,7 @@ def checked_speed(platform: Platform, speed: object) -> float | None:
     for name in ("speed_limit", "wheel_speed_limit"):
         most = getattr(platform, name)
         if asked > most:
-            raise ValueError(f"speed={shown(asked, 'm/s')} must be <= {name}={shown(most, 'm/s')}; ask for less")
+            raise ValueError(f"speed={shown(asked, 'm/s')} must be <= {name}={shown(rounded_down(most), 'm/s')}; ask for less")
     return asked
 
 
@@ -332,7 +290,7 @@ def check_window(platform: Platform, found: sizing.Window, speed: float, capture
     if speed * platform.period > sizing.CHORD * capture_radius * (1.0 + 1e-12):
         raise ValueError(
             f"capture_radius={shown(capture_radius, 'm')} must be >= speed * period / {sizing.CHORD:g} = "
-            f"{shown(speed * platform.period / sizing.CHORD, 'm')}, for a step must not pass over the disc; "
+            f"{shown(rounded_up(speed * platform.period / sizing.CHORD), 'm')}, for a step must not pass over the disc; "
             f"widen it, or drive at {workable} or less"
         )
     if speed > found.fastest * (1.0 + 1e-12):
@@ -345,11 +303,11 @@ def checked_gain(
     chosen = sizing.chosen_gain(platform, found)
     if gain is not None:
         chosen = check_above_zero("gain", gain, "1/s", "give turn rate per heading error, or leave it out")
-        if not found.low * (1.0 - 1e-12) <= chosen <= found.high * (1.0 + 1e-12):
+        if not found.low * (1.0 - PRINTED) <= chosen <= found.high * (1.0 + PRINTED):
             what = "circles the goal" if chosen < found.low else "swings"
-            working = f"{rounded_up(found.low):g} to {rounded_down(found.high):g} 1/s"
+            working = f"{found.low:.4g} to {found.high:.4g} 1/s"
             raise ValueError(f"gain={shown(chosen, '1/s')} {what}; give {working}, or leave it out")
-    if not (isinstance(integral_time, float) and integral_time == math.inf):
+    if not (isinstance(integral_time, (float, np.floating)) and integral_time == math.inf):
         check_above_zero("integral_time", integral_time, "s", "give the time in which the integral repeats the error; inf for none")
     check_not_negative("derivative_time", derivative_time, "s", "give the time by which the derivative looks ahead; 0 for none")
     delay = () if predict else (platform.dead_time, platform.motor_lag)
@@ -367,7 +325,9 @@ def checked_age(platform: Platform, stale_after: object) -> float:
         return platform.dead_time + 3.0 * platform.period
     age = check_above_zero("stale_after", stale_after, "s", "give the age at which a pose is too old")
     if age < platform.period:
-        raise ValueError(f"stale_after={shown(age, 's')} must be >= period={shown(platform.period, 's')}; a fresh pose must count")
-    if age > 10.0:
-        raise ValueError(f"stale_after={shown(age, 's')} must be <= 10 s; a pose that old says nothing")
+        raise ValueError(
+            f"stale_after={shown(age, 's')} must be >= period={shown(rounded_up(platform.period), 's')}; a fresh pose must count"
+        )
+    if age > 20.0:
+        raise ValueError(f"stale_after={shown(age, 's')} must be <= 20 s; a pose that old says nothing")
     return age

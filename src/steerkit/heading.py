@@ -14,10 +14,14 @@ import math
 from typing import NamedTuple
 
 from steerkit.angles import difference_kernel
+from steerkit.checks import check_above_zero
 from steerkit.compiled import kernel
 from steerkit.limits import clip_kernel
 
 __all__ = ["HeadingLaw", "HeadingMemory", "steer"]
+
+
+SHORTEST = 1e-6  # s; over a shorter time no rate can be told
 
 
 class HeadingLaw(NamedTuple):
@@ -40,7 +44,7 @@ class HeadingMemory(NamedTuple):
 def heading_rate_kernel(heading: float, before: float, duration: float) -> float:
     """Return how fast the heading moved (rad/s), the short way round; 0 where there is no heading before."""
     turned = difference_kernel(heading, before)
-    return turned / duration if turned == turned and duration > 0.0 else 0.0
+    return turned / duration if turned == turned and duration > SHORTEST else 0.0
 
 
 @kernel
@@ -87,6 +91,11 @@ def steer(
     >>> steer(law, HeadingMemory(), target=-3.0, heading=3.0, duration=0.05)[0].__round__(6)
     0.566371
     """
+    check_above_zero("gain", law.gain, "1/s", "give turn rate per heading error")
+    if law.integral_time != math.inf:
+        check_above_zero(
+            "integral_time", law.integral_time, "s", "give the time in which the integral repeats the error; inf for none"
+        )
     error = difference_kernel(float(target), float(heading))
     rate = heading_rate_kernel(float(heading), memory.heading, float(duration))
     asked, wanted = steer_kernel(error, rate, memory.integral, *(float(setting) for setting in law))

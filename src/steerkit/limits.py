@@ -9,7 +9,7 @@ from __future__ import annotations
 
 import math
 
-from steerkit.checks import check_above_zero, check_not_negative
+from steerkit.checks import check_above_zero, check_not_negative, check_number
 from steerkit.compiled import kernel
 from steerkit.platforms import Platform
 from steerkit.signals import Causes, Motion
@@ -149,10 +149,10 @@ def limit(platform: Platform, before: tuple[float, float], wanted: tuple[float, 
     """
     p = platform
     v, w, bound = limit_kernel(
-        float(before[0]),
-        float(before[1]),
-        float(wanted[0]),
-        float(wanted[1]),
+        check_number("before[0]", before[0], "m/s", "give the speed of the command before"),
+        check_number("before[1]", before[1], "rad/s", "give the turn rate of the command before"),
+        check_number("wanted[0]", wanted[0], "m/s", "give the speed that is wanted"),
+        check_number("wanted[1]", wanted[1], "rad/s", "give the turn rate that is wanted"),
         p.speed_limit,
         p.reverse_speed_limit,
         p.turn_rate_limit,

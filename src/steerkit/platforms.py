@@ -15,6 +15,8 @@ from steerkit.checks import check_above_zero, check_at_most, check_not_negative,
 __all__ = ["Platform"]
 
 VERSION = 1
+SHORTEST_PERIOD = 1e-4  # s
+SMALLEST = 1e-6  # of any other number that is not 0
 VERSION_KEY = "steerkit_platform_version"
 
 
@@ -167,6 +169,9 @@ def checked(one: Field[Any], value: object) -> float:
     told = one.metadata
     check = check_not_negative if one.name == "dead_time" or not needed(one) else check_above_zero
     size = check(one.name, value, told["unit"], told["measure"])
+    least = SHORTEST_PERIOD if one.name == "period" else SMALLEST
+    if 0.0 < size < least:
+        raise ValueError(f"{one.name}={shown(size, told['unit'])} must be >= {shown(least, told['unit'])}; {told['measure']}")
     if size > told["most"]:
         raise ValueError(
             f"{one.name}={shown(size, told['unit'])} must be <= {shown(told['most'], told['unit'])}; "

@@ -1,7 +1,7 @@
 """Signals: what flows through a step, in and out.
 
 Measurement and memory in; decision out: command, phase, causes, report, memory. SI units, radians, ISO 8855 frames. NaN or None
-means missing. Everything is a value: it prints, compares, and can be stored and replayed.
+means missing. Everything is a value: it prints, compares (but for a NaN, which equals nothing), and can be stored and replayed.
 """
 
 from __future__ import annotations
@@ -119,6 +119,8 @@ class Phase(IntEnum):
     neither             at rest (command 0, wheels < 1 cm/s) in the disc    ARRIVED
     neither             else                                                DRIVING
     ==================  ==================================================  ========
+
+    The wheels are at rest as measured, where `speed` or `turn_rate` is; else as modelled from the commands, dead time and lag.
     """
 
     DRIVING = 0
@@ -173,8 +175,16 @@ class Memory:
     __slots__ = ("row",)
 
     def __init__(self, row: NDArray[np.float64]) -> None:
+        self.row = np.array(row, dtype=np.float64)
+        self.row.setflags(write=False)
+
+    @classmethod
+    def of(cls, row: NDArray[np.float64]) -> Memory:
+        """Return a memory that takes over a row which nobody else will write to."""
+        made = object.__new__(cls)
         row.setflags(write=False)
-        self.row = row
+        made.row = row
+        return made
 
     @property
     def time(self) -> float:
@@ -198,7 +208,7 @@ class Memory:
     @classmethod
     def from_bytes(cls, stored: bytes) -> Memory:
         """Return the memory stored by `to_bytes`."""
-        return cls(np.frombuffer(stored, dtype=np.float64).copy())
+        return cls(np.frombuffer(stored, dtype=np.float64))
 
     def __eq__(self, other: object) -> bool:
         return isinstance(other, Memory) and self.row.tobytes() == other.row.tobytes()
@@ -213,7 +223,7 @@ class Memory:
         return f"Memory(time={self.time!r}, command={self.command}, under_way={len(self.under_way)})"
 
 
-HEAD = 18  # floats of a memory row before the commands under way; their places are named in controller.py
+HEAD = 18  # floats of a memory row before the commands under way; their places are named in step.py
 
 
 class Decision(NamedTuple):

@@ -24,6 +24,8 @@ from steerkit.signals import HEAD, Causes, Frame, Phase
 FAR = 1e12  # m, rad, s: a number beyond it is not a measurement
 FAST = 1e4  # m/s, rad/s: nor is a motion beyond this
 REST = 0.01  # m/s: wheels slower than this are at rest
+BELIEVED = 2.0  # of the wheel-speed limit: a motion beyond it was not given to these wheels
+SIGMAS = 6.0 * math.sqrt(2.0)  # of the difference of two poses
 
 
 class Settings(NamedTuple):
@@ -53,12 +55,14 @@ class Settings(NamedTuple):
     derivative_time: float
     predict: float
     stale_after: float
+    rest_radius: float
 
 
 # Places in a memory row; behind them, from HEAD on, the commands under way: age, speed, turn rate, the newest first.
 TIME, SPEED, TURN_RATE, X, Y, HEADING, POSE_AGE, BASE_AGE, BASE_SPEED, BASE_TURN_RATE = range(10)
-GOAL_X, GOAL_Y, INTEGRAL, HEADING_BEFORE, STOPPING, PHASE, GOAL_LOCAL, SPARE = range(10, HEAD)
+GOAL_X, GOAL_Y, INTEGRAL, HEADING_BEFORE, PROGRESS, PHASE, GOAL_LOCAL, STAYS = range(10, HEAD)
 # BASE is the motion of the wheels, as modelled, BASE_AGE before the last step: no pose in use is older.
+# STAYS: arrived, and to stand still until the goal or the robot is moved.
 
 MEASURED = 15  # numbers of a measurement: `controller.numbers` lists them
 RESULT = 16  # numbers of a result: left, right, speed, turn rate, phase, causes, heading error, distance, pose, age, goal, wanted
@@ -83,13 +87,14 @@ def usable_kernel(value: float, most: float) -> bool:
 @kernel
 def sound_kernel(memory: Sequence[float], rows: int) -> bool:
     """Say whether the numbers of a memory that must be finite are."""
-    for i in range(HEAD, HEAD + 3 * rows):
-        if not usable_kernel(memory[i], FAR):
+    for i in range(HEAD, HEAD + 3 * rows, 3):
+        if not (0.0 <= memory[i] <= FAR and usable_kernel(memory[i + 1], FAST) and usable_kernel(memory[i + 2], FAST)):
             return False
     posed = not (abs(memory[X]) > FAR or abs(memory[Y]) > FAR or abs(memory[HEADING]) > FAR)  # NaN: none yet
     motion = usable_kernel(memory[SPEED], FAST) and usable_kernel(memory[TURN_RATE], FAST)
     base = usable_kernel(memory[BASE_SPEED], FAST) and usable_kernel(memory[BASE_TURN_RATE], FAST)
-    return posed and motion and base and usable_kernel(memory[BASE_AGE], FAR) and usable_kernel(memory[INTEGRAL], FAR)
+    ages = memory[POSE_AGE] >= 0.0 and 0.0 <= memory[BASE_AGE] <= FAR
+    return posed and motion and base and ages and usable_kernel(memory[INTEGRAL], FAR)
 
 
 @kernel
@@ -139,28 +144,32 @@ def seen_kernel(measured: Sequence[float]) -> tuple[float, float, float, int]:
 
 
 @kernel
-def before_kernel(memory: Sequence[float], measured: Sequence[float]) -> tuple[float, float, int]:
-    """Return the command before, ours or what the wheels were given instead."""
+def before_kernel(memory: Sequence[float], measured: Sequence[float], wheel: float, half_track: float) -> tuple[float, float, int]:
+    """Return the command before: ours, or what the wheels were given instead, if these wheels can have been given it."""
     v, w = measured[12], measured[13]
-    if usable_kernel(v, FAST) and usable_kernel(w, FAST):
+    if abs(v) + abs(w) * half_track <= BELIEVED * wheel:
         return v, w, OTHERS
     return memory[SPEED], memory[TURN_RATE], BAD_FIELD if v == v or w == w else 0
 
 
 @kernel
 def pose_kernel(
-    memory: Sequence[float], measured: Sequence[float], since: float, period: float
+    memory: Sequence[float], measured: Sequence[float], since: float, period: float, stale_after: float
 ) -> tuple[float, float, float, float, bool, int]:
     """Return the pose to go by (x, y, heading), its age, whether it is local, and what was wrong with the measured one.
 
-    The measured one where it is usable; else the last that was. A goal seen from the robot needs none: the robot is the origin.
+    The measured one where it is usable; else, or where it is stale and older, the last that was. A goal seen from the robot needs
+    none: the robot is the origin.
     """
     time, x, y, heading, pose_time = measured[0], measured[1], measured[2], measured[3], measured[4]
     age = 0.0 if pose_time != pose_time else time - pose_time
     posed = usable_kernel(x, FAR) and usable_kernel(y, FAR) and usable_kernel(heading, FAR)
     local = measured[7] == ROBOT and not posed
+    known_age = memory[POSE_AGE] + since
     if not (-0.5 * period <= age <= FAR and (posed or local)):
-        return memory[X], memory[Y], memory[HEADING], memory[POSE_AGE] + since, False, BAD_POSE
+        return memory[X], memory[Y], memory[HEADING], known_age, False, BAD_POSE
+    if age > stale_after + 1e-9 and known_age < age and not local:
+        return memory[X], memory[Y], memory[HEADING], known_age, False, STALE_POSE
     if local:
         return 0.0, 0.0, 0.0, max(age, 0.0), True, 0
     return x, y, wrap_kernel(heading), max(age, 0.0), False, 0
@@ -183,23 +192,25 @@ def jumped_kernel(
     """
     dx = x - memory[X]
     dy = y - memory[Y]
-    far = max(settings[3], settings[4], v) * span + 6.0 * settings[11]
+    far = max(settings[3], settings[4], v) * span + SIGMAS * settings[11]
     turned = difference_kernel(heading, memory[HEADING])
-    return dx * dx + dy * dy > far * far or abs(turned) > max(settings[5], w) * span + 6.0 * settings[12]
+    return dx * dx + dy * dy > far * far or abs(turned) > max(settings[5], w) * span + SIGMAS * settings[12]
 
 
 @kernel
 def goal_kernel(
     memory: Sequence[float], measured: Sequence[float], x: float, y: float, heading: float, local: bool, radius: float
-) -> tuple[float, float, bool, bool]:
-    """Return the goal in the world, whether there is one, and whether it is new: moved by more than its disc."""
+) -> tuple[float, float, bool, bool, float]:
+    """Return the goal in the world, whether there is one, whether it is new (moved by more than its disc), how far it moved."""
     goal_x, goal_y, frame = measured[5], measured[6], measured[7]
     if not (usable_kernel(goal_x, FAR) and usable_kernel(goal_y, FAR) and (frame == 0.0 or frame == ROBOT)):
-        return math.nan, math.nan, False, False
+        return math.nan, math.nan, False, False, math.nan
     if frame == ROBOT:
         goal_x, goal_y = to_world_kernel(x, y, heading, goal_x, goal_y)
     moved, _ = bearing_kernel(memory[GOAL_X], memory[GOAL_Y], goal_x, goal_y)
-    return goal_x, goal_y, True, not (moved <= radius or (local and memory[GOAL_LOCAL] != 0.0))
+    if local and memory[GOAL_LOCAL] != 0.0:
+        moved = 0.0  # seen from a robot that knows no pose: it cannot be told
+    return goal_x, goal_y, True, not moved <= radius, moved
 
 
 @kernel
@@ -250,7 +261,7 @@ def step_kernel(settings: Sequence[float], memory: Sequence[float], measured: Se
     wheel, half_track, acceleration, braking, turn_acceleration = settings[6], settings[7], settings[8], settings[9], settings[10]
     capture_radius, stay_radius, stop_radius, aim_radius = settings[13], settings[14], settings[15], settings[16]
     cruise, ceiling, gain, integral_time, derivative_time = settings[17], settings[18], settings[19], settings[20], settings[21]
-    predict, stale_after = settings[22], settings[23]
+    predict, stale_after, rest_radius = settings[22], settings[23], settings[24]
     rows = (len(memory) - HEAD) // 3
     nan = math.nan
     time = measured[0]
@@ -261,8 +272,8 @@ def step_kernel(settings: Sequence[float], memory: Sequence[float], measured: Se
     # What is known: the time, the command before, the pose and its age, the motion at that time, the goal.
     since, clock = clock_kernel(time, memory[TIME], period, stale_after)
     seen_v, seen_w, limit, causes = seen_kernel(measured)
-    last_v, last_w, trouble = before_kernel(memory, measured)
-    x, y, heading, age, local, pose_trouble = pose_kernel(memory, measured, since, period)
+    last_v, last_w, trouble = before_kernel(memory, measured, wheel, half_track)
+    x, y, heading, age, local, pose_trouble = pose_kernel(memory, measured, since, period, stale_after)
     causes |= trouble | pose_trouble | (0 if clock else BAD_CLOCK)
     known = age <= stale_after + 1e-9
     if not known and age <= FAR:
@@ -288,7 +299,7 @@ def step_kernel(settings: Sequence[float], memory: Sequence[float], measured: Se
         span = abs(memory[POSE_AGE] + since - age) + period
         fastest_v, fastest_w = max(abs(v), abs(last_v)), max(abs(w), abs(last_w))
         jumped = jumped_kernel(memory, settings, x, y, heading, span, fastest_v, fastest_w)
-    goal_x, goal_y, aimed, new_goal = goal_kernel(memory, measured, x, y, heading, local, capture_radius)
+    goal_x, goal_y, aimed, new_goal, moved = goal_kernel(memory, measured, x, y, heading, local, capture_radius)
     if jumped:
         causes |= POSE_JUMPED
     if not aimed:
@@ -304,17 +315,22 @@ def step_kernel(settings: Sequence[float], memory: Sequence[float], measured: Se
             memory, HEAD, rows, since, last_v, last_w, dead_time, lag, -age, 0.0, x, y, heading, v, w
         )
         rest = abs(v) + abs(w) * half_track < REST
+        if (seen_v == seen_v and abs(seen_v) >= REST) or (seen_w == seen_w and abs(seen_w) * half_track >= REST):
+            rest = False
         if aimed:
             distance, _ = bearing_kernel(now_x, now_y, goal_x, goal_y)
-    stays = memory[PHASE] == ARRIVED and not new_goal and distance <= stay_radius
-    integral, before, stopping = 0.0, nan, False
+    # Noise of pose and goal does not make a robot that has arrived start again.
+    stood = memory[STAYS] != 0.0 and not new_goal
+    same_place = moved <= stay_radius - capture_radius
+    stays = stood and distance <= (stay_radius if same_place else capture_radius)
+    integral, before, progress = 0.0, nan, 0.0
     asked, wanted_v, wanted_w = 0.0, 0.0, 0.0
     if not held:
         then_x, then_y, then_heading, v, w = carry_kernel(
             memory, HEAD, rows, since, last_v, last_w, dead_time, lag, 0.0, dead_time, now_x, now_y, now_heading, v, w
         )
         then_x, then_y, then_heading = coast_kernel(then_x, then_y, then_heading, v, w, lag)
-        bearing, _, wanted_v, stopping = constant_speed_kernel(
+        bearing, _, wanted_v, progress = constant_speed_kernel(
             then_x,
             then_y,
             then_heading,
@@ -322,11 +338,12 @@ def step_kernel(settings: Sequence[float], memory: Sequence[float], measured: Se
             last_w,
             goal_x,
             goal_y,
-            memory[STOPPING] != 0.0 and not new_goal,
+            memory[PROGRESS] if same_place else 0.0,
             cruise,
             aim_radius,
             stop_radius,
             capture_radius,
+            rest_radius,
             braking,
             turn_acceleration,
             period,
@@ -335,14 +352,14 @@ def step_kernel(settings: Sequence[float], memory: Sequence[float], measured: Se
             then_heading = heading
             _, bearing = bearing_kernel(x, y, goal_x, goal_y)
         error = difference_kernel(bearing, then_heading)
-        error = turning_on_kernel(error, last_w, 6.0 * (settings[12] + settings[11] / max(distance, capture_radius)))
+        turning_to = turning_on_kernel(error, last_w, 6.0 * (settings[12] + settings[11] / max(distance, capture_radius)))
         before = then_heading
         if stays:
             wanted_v = 0.0
         if wanted_v != 0.0:
             integral = 0.0 if new_goal or jumped else memory[INTEGRAL]
             rate = heading_rate_kernel(then_heading, nan if jumped or local else memory[HEADING_BEFORE], since)
-            asked, wanted_w = steer_kernel(error, rate, integral, gain, ceiling, integral_time, derivative_time)
+            asked, wanted_w = steer_kernel(turning_to, rate, integral, gain, ceiling, integral_time, derivative_time)
             if abs(asked) > ceiling:
                 causes |= TURN_RATE_LIMIT
 
@@ -359,18 +376,19 @@ def step_kernel(settings: Sequence[float], memory: Sequence[float], measured: Se
     phase = DRIVING
     if held:
         phase = HELD
-    elif v1 == 0.0 and w1 == 0.0 and (stays or (rest and distance <= capture_radius)):
+    elif v1 == 0.0 and w1 == 0.0 and rest and (stays or distance <= rest_radius):
         phase = ARRIVED
 
     remember_kernel(memory, out, rows, since, last_v, last_w, dead_time, lag, stale_after, v1, w1)
     out[TIME] = time if usable_kernel(time, FAR) else memory[TIME] + period
     out[X], out[Y], out[HEADING], out[POSE_AGE] = (nan, nan, nan, math.inf) if local else (x, y, heading, age)
-    if aimed:
+    stays = phase == ARRIVED or (stood if held else stays)
+    if aimed and not (stays and stood):
         out[GOAL_X], out[GOAL_Y], out[GOAL_LOCAL] = (nan, nan, 1.0) if local else (goal_x, goal_y, 0.0)
     else:
         out[GOAL_X], out[GOAL_Y], out[GOAL_LOCAL] = memory[GOAL_X], memory[GOAL_Y], memory[GOAL_LOCAL]
     out[INTEGRAL], out[HEADING_BEFORE] = integral, before
-    out[STOPPING], out[PHASE], out[SPARE] = 1.0 if stopping else 0.0, float(phase), 0.0
+    out[PROGRESS], out[PHASE], out[STAYS] = progress, float(phase), 1.0 if stays else 0.0
 
     left, right = wheels_kernel(v1, w1, 2.0 * half_track)
     code, why = float(phase), float(causes)
