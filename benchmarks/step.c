@@ -13,6 +13,9 @@
 #define FAR 1e12
 #define FAST 1e4
 #define REST 0.01
+#define BELIEVED 2.0
+#define SIGMAS (6.0 * sqrt(2.0))
+#define SHORTEST 1e-6
 #define NEAR 1e-3
 #define AHEAD 0.5
 #define TRANSIENT 3.0
@@ -21,9 +24,10 @@
 
 /* Places in a memory row, in a measurement and in the settings. */
 enum { TIME, SPEED, TURN_RATE, X, Y, HEADING, POSE_AGE, BASE_AGE, BASE_SPEED, BASE_TURN_RATE };
-enum { GOAL_X = 10, GOAL_Y, INTEGRAL, HEADING_BEFORE, STOPPING, PHASE, GOAL_LOCAL, SPARE, HEAD };
+enum { GOAL_X = 10, GOAL_Y, INTEGRAL, HEADING_BEFORE, PROGRESS, PHASE, GOAL_LOCAL, STAYS, HEAD };
 enum { MEASURED = 15, RESULT = 16 };
 enum { DRIVING, ARRIVED, HELD };
+enum { ON_THE_WAY, CAPTURED, STOPPING };
 enum {
     SPEED_LIMIT = 1, TURN_RATE_LIMIT = 2, WHEEL_SPEED_LIMIT = 4, ACCELERATION_LIMIT = 8, BRAKING_LIMIT = 16,
     TURN_ACCELERATION_LIMIT = 32, TOLD_TO_HOLD = 64, BAD_POSE = 128, STALE_POSE = 256, POSE_JUMPED = 512, BAD_GOAL = 1024,
@@ -34,7 +38,7 @@ typedef struct { double x, y, heading; } Pose;
 typedef struct { double v, w; } Motion;
 typedef struct { Pose pose; Motion motion; } Moving;
 typedef struct { double v, w; int bound; } Limited;
-typedef struct { double bearing, distance, speed; bool stopping; } Approach;
+typedef struct { double bearing, distance, speed, progress; } Approach;
 typedef struct { double x, y; } Point;
 typedef struct { double begin, until; } Span;
 
@@ -164,7 +168,7 @@ static double held_speed(double distance, double braking, double period, double 
 static double heading_rate(double heading, double before, double duration)
 {
     double turned = difference(heading, before);
-    return turned == turned && duration > 0.0 ? turned / duration : 0.0;
+    return turned == turned && duration > SHORTEST ? turned / duration : 0.0;
 }
 
 static double integrate(double integral, double error, double asked, double given, double duration)
@@ -302,23 +306,40 @@ static double way_ahead(double distance, double error, double radius)
     return distance * cos(error) - sqrt(most(0.0, radius * radius - across * across));
 }
 
+static bool stop_kept(
+    Pose p, Motion before, double goal_x, double goal_y, double radius, double braking, double turn_acceleration, double path)
+{
+    if (fabs(before.w) * path > PI * before.v) {
+        double curve = before.v / before.w;
+        double away = distance_to(p.x - curve * sin(p.heading), p.y + curve * cos(p.heading), goal_x, goal_y);
+        return away + fabs(curve) <= radius;
+    }
+    Pose end = stop_end(p, before.v, before.w, braking, turn_acceleration, path);
+    return distance_to(end.x, end.y, goal_x, goal_y) <= radius;
+}
+
 static Approach constant_speed(
-    Pose p, Motion before, double goal_x, double goal_y, bool stopping, double cruise, double aim_radius, double stop_radius,
-    double capture_radius, double braking, double turn_acceleration, double period)
+    Pose p, Motion before, double goal_x, double goal_y, double progress, double cruise, double aim_radius, double stop_radius,
+    double capture_radius, double rest_radius, double braking, double turn_acceleration, double period)
 {
     double distance = distance_to(p.x, p.y, goal_x, goal_y), bearing = bearing_to(p.x, p.y, goal_x, goal_y);
-    if (before.v == 0.0 && distance <= capture_radius)
-        return (Approach){bearing, distance, 0.0, true};
+    if (before.v == 0.0 && distance <= rest_radius)
+        return (Approach){bearing, distance, 0.0, STOPPING};
     double slower = most(0.0, before.v - braking * period);
+    double path = held_stop(slower, braking, period);
     double way = way_ahead(distance, difference(bearing, p.heading), aim_radius);
     double speed = way == INFINITY ? cruise : held_speed(way, braking, period, cruise);
-    double path = held_stop(slower, braking, period);
+    double reached = progress != ON_THE_WAY || distance <= capture_radius ? CAPTURED : ON_THE_WAY;
+    if (reached == CAPTURED) {
+        double near = distance - aim_radius;
+        speed = least(speed, near > NEAR * capture_radius ? held_speed(near, braking, period, cruise) : 0.0);
+    }
     if (NEAR * capture_radius < way && way < INFINITY && path <= way + aim_radius)
-        return (Approach){bearing, distance, speed, false};
-    Pose end = stop_end(p, before.v, before.w, braking, turn_acceleration, path);
-    if (distance_to(end.x, end.y, goal_x, goal_y) <= (stopping ? capture_radius : stop_radius))
-        return (Approach){bearing, distance, 0.0, true};
-    return (Approach){bearing, distance, speed, false};
+        return (Approach){bearing, distance, speed, reached};
+    double radius = progress == STOPPING ? capture_radius : stop_radius;
+    if (stop_kept(p, before, goal_x, goal_y, radius, braking, turn_acceleration, path))
+        return (Approach){bearing, distance, 0.0, STOPPING};
+    return (Approach){bearing, distance, speed, reached};
 }
 
 /* step */
@@ -327,13 +348,14 @@ static bool usable(double value, double bound) { return -bound <= value && value
 
 static bool sound(const double *memory, long rows)
 {
-    for (long i = HEAD; i < HEAD + 3 * rows; i++)
-        if (!usable(memory[i], FAR))
+    for (long i = HEAD; i < HEAD + 3 * rows; i += 3)
+        if (!(0.0 <= memory[i] && memory[i] <= FAR && usable(memory[i + 1], FAST) && usable(memory[i + 2], FAST)))
             return false;
     bool posed = !(fabs(memory[X]) > FAR || fabs(memory[Y]) > FAR || fabs(memory[HEADING]) > FAR);
     bool motion = usable(memory[SPEED], FAST) && usable(memory[TURN_RATE], FAST);
     bool base = usable(memory[BASE_SPEED], FAST) && usable(memory[BASE_TURN_RATE], FAST);
-    return posed && motion && base && usable(memory[BASE_AGE], FAR) && usable(memory[INTEGRAL], FAR);
+    bool ages = memory[POSE_AGE] >= 0.0 && 0.0 <= memory[BASE_AGE] && memory[BASE_AGE] <= FAR;
+    return posed && motion && base && ages && usable(memory[INTEGRAL], FAR);
 }
 
 static void fresh(double *out, long rows, double time, double v, double w, double period, double stale_after)
@@ -359,7 +381,7 @@ typedef struct { double since; bool good; } Clock;
 typedef struct { Motion motion; double limit; int trouble; } Seen;
 typedef struct { Motion motion; int trouble; } Before;
 typedef struct { Pose pose; double age; bool local; int trouble; } Posed;
-typedef struct { Point point; bool aimed, fresh; } Goal;
+typedef struct { Point point; bool aimed, fresh; double moved; } Goal;
 
 static Clock clock_of(double time, double last, double period, double stale_after)
 {
@@ -385,22 +407,25 @@ static Seen seen_in(const double *measured)
     return (Seen){{v, w}, most(speed_limit, 0.0), wrong ? BAD_FIELD : 0};
 }
 
-static Before before_of(const double *memory, const double *measured)
+static Before before_of(const double *memory, const double *measured, double wheel, double half_track)
 {
     double v = measured[12], w = measured[13];
-    if (usable(v, FAST) && usable(w, FAST))
+    if (fabs(v) + fabs(w) * half_track <= BELIEVED * wheel)
         return (Before){{v, w}, APPLIED_BY_OTHERS};
     return (Before){{memory[SPEED], memory[TURN_RATE]}, v == v || w == w ? BAD_FIELD : 0};
 }
 
-static Posed pose_of(const double *memory, const double *measured, double since, double period)
+static Posed pose_of(const double *memory, const double *measured, double since, double period, double stale_after)
 {
     double time = measured[0], x = measured[1], y = measured[2], heading = measured[3], pose_time = measured[4];
     double age = pose_time != pose_time ? 0.0 : time - pose_time;
     bool posed = usable(x, FAR) && usable(y, FAR) && usable(heading, FAR);
     bool local = measured[7] == 1.0 && !posed;
+    double known_age = memory[POSE_AGE] + since;
     if (!(-0.5 * period <= age && age <= FAR && (posed || local)))
-        return (Posed){{memory[X], memory[Y], memory[HEADING]}, memory[POSE_AGE] + since, false, BAD_POSE};
+        return (Posed){{memory[X], memory[Y], memory[HEADING]}, known_age, false, BAD_POSE};
+    if (age > stale_after + 1e-9 && known_age < age && !local)
+        return (Posed){{memory[X], memory[Y], memory[HEADING]}, known_age, false, STALE_POSE};
     if (local)
         return (Posed){{0.0, 0.0, 0.0}, most(age, 0.0), true, 0};
     return (Posed){{x, y, wrap(heading)}, most(age, 0.0), false, 0};
@@ -410,9 +435,9 @@ static bool jumped_to(const double *memory, const double *settings, Pose p, doub
 {
     double dx = p.x - memory[X];
     double dy = p.y - memory[Y];
-    double far = most(most(settings[3], settings[4]), v) * span + 6.0 * settings[11];
+    double far = most(most(settings[3], settings[4]), v) * span + SIGMAS * settings[11];
     double turned = difference(p.heading, memory[HEADING]);
-    return dx * dx + dy * dy > far * far || fabs(turned) > most(settings[5], w) * span + 6.0 * settings[12];
+    return dx * dx + dy * dy > far * far || fabs(turned) > most(settings[5], w) * span + SIGMAS * settings[12];
 }
 
 static Goal goal_of(const double *memory, const double *measured, Pose p, bool local, double radius)
@@ -420,11 +445,13 @@ static Goal goal_of(const double *memory, const double *measured, Pose p, bool l
     Point goal = {measured[5], measured[6]};
     double frame = measured[7];
     if (!(usable(goal.x, FAR) && usable(goal.y, FAR) && (frame == 0.0 || frame == 1.0)))
-        return (Goal){{NAN, NAN}, false, false};
+        return (Goal){{NAN, NAN}, false, false, NAN};
     if (frame == 1.0)
         goal = to_world(p, goal.x, goal.y);
     double moved = distance_to(memory[GOAL_X], memory[GOAL_Y], goal.x, goal.y);
-    return (Goal){goal, true, !(moved <= radius || (local && memory[GOAL_LOCAL] != 0.0))};
+    if (local && memory[GOAL_LOCAL] != 0.0)
+        moved = 0.0;
+    return (Goal){goal, true, !(moved <= radius), moved};
 }
 
 static double turning_on(double error, double w, double blur)
@@ -461,6 +488,7 @@ void step_apart(const double *settings, const double *memory, long size, const d
     double turn_acceleration = settings[10], capture_radius = settings[13], stay_radius = settings[14], stop_radius = settings[15];
     double aim_radius = settings[16], cruise = settings[17], ceiling = settings[18], gain = settings[19];
     double integral_time = settings[20], derivative_time = settings[21], predict = settings[22], stale_after = settings[23];
+    double rest_radius = settings[24];
     long rows = (size - HEAD) / 3;
     double time = measured[0];
     if (!sound(memory, rows)) {
@@ -474,9 +502,9 @@ void step_apart(const double *settings, const double *memory, long size, const d
     Clock clock = clock_of(time, memory[TIME], period, stale_after);
     double since = clock.since;
     Seen seen = seen_in(measured);
-    Before before = before_of(memory, measured);
+    Before before = before_of(memory, measured, wheel, half_track);
     Motion last = before.motion;
-    Posed posed = pose_of(memory, measured, since, period);
+    Posed posed = pose_of(memory, measured, since, period, stale_after);
     double age = posed.age;
     int causes = seen.trouble | before.trouble | posed.trouble | (clock.good ? 0 : BAD_CLOCK);
     bool known = age <= stale_after + 1e-9;
@@ -511,34 +539,37 @@ void step_apart(const double *settings, const double *memory, long size, const d
     if (known) {
         now = carry(&under_way, -age, 0.0, posed.pose, motion);
         rest = fabs(now.motion.v) + fabs(now.motion.w) * half_track < REST;
+        if (fabs(seen.motion.v) >= REST || fabs(seen.motion.w) * half_track >= REST)
+            rest = false;
         if (goal.aimed)
             distance = distance_to(now.pose.x, now.pose.y, goal.point.x, goal.point.y);
     }
-    bool stays = memory[PHASE] == ARRIVED && !goal.fresh && distance <= stay_radius;
-    double integral = 0.0, heading_before = NAN, asked = 0.0, wanted_v = 0.0, wanted_w = 0.0;
-    bool stopping = false;
+    bool stood = memory[STAYS] != 0.0 && !goal.fresh;
+    bool same_place = goal.moved <= stay_radius - capture_radius;
+    bool stays = stood && distance <= (same_place ? stay_radius : capture_radius);
+    double integral = 0.0, heading_before = NAN, asked = 0.0, wanted_v = 0.0, wanted_w = 0.0, progress = 0.0;
     if (!held) {
         Moving then = carry(&under_way, 0.0, dead_time, now.pose, now.motion);
         Pose end = arc(then.pose, then.motion.v, then.motion.w, lag);
         Approach approach = constant_speed(
-            end, last, goal.point.x, goal.point.y, memory[STOPPING] != 0.0 && !goal.fresh, cruise, aim_radius, stop_radius,
-            capture_radius, braking, turn_acceleration, period);
+            end, last, goal.point.x, goal.point.y, same_place ? memory[PROGRESS] : 0.0, cruise, aim_radius, stop_radius,
+            capture_radius, rest_radius, braking, turn_acceleration, period);
         wanted_v = approach.speed;
-        stopping = approach.stopping;
+        progress = approach.progress;
         double bearing = approach.bearing, heading = end.heading;
         if (predict == 0.0) {
             heading = posed.pose.heading;
             bearing = bearing_to(posed.pose.x, posed.pose.y, goal.point.x, goal.point.y);
         }
         error = difference(bearing, heading);
-        error = turning_on(error, last.w, 6.0 * (settings[12] + settings[11] / most(distance, capture_radius)));
+        double turning_to = turning_on(error, last.w, 6.0 * (settings[12] + settings[11] / most(distance, capture_radius)));
         heading_before = heading;
         if (stays)
             wanted_v = 0.0;
         if (wanted_v != 0.0) {
             integral = goal.fresh || jumped ? 0.0 : memory[INTEGRAL];
             double rate = heading_rate(heading, jumped || posed.local ? NAN : memory[HEADING_BEFORE], since);
-            asked = gain * (error + integral / integral_time - derivative_time * rate);
+            asked = gain * (turning_to + integral / integral_time - derivative_time * rate);
             wanted_w = clip(asked, -ceiling, ceiling);
             if (fabs(asked) > ceiling)
                 causes |= TURN_RATE_LIMIT;
@@ -559,7 +590,7 @@ void step_apart(const double *settings, const double *memory, long size, const d
     int phase = DRIVING;
     if (held)
         phase = HELD;
-    else if (given.v == 0.0 && given.w == 0.0 && (stays || (rest && distance <= capture_radius)))
+    else if (given.v == 0.0 && given.w == 0.0 && rest && (stays || distance <= rest_radius))
         phase = ARRIVED;
 
     /* The new memory; out may be memory, so each place is read before it is written. */
@@ -569,14 +600,16 @@ void step_apart(const double *settings, const double *memory, long size, const d
     out[Y] = posed.local ? NAN : posed.pose.y;
     out[HEADING] = posed.local ? NAN : posed.pose.heading;
     out[POSE_AGE] = posed.local ? INFINITY : age;
-    out[GOAL_X] = goal.aimed ? (posed.local ? NAN : goal.point.x) : memory[GOAL_X];
-    out[GOAL_Y] = goal.aimed ? (posed.local ? NAN : goal.point.y) : memory[GOAL_Y];
-    out[GOAL_LOCAL] = goal.aimed ? (posed.local ? 1.0 : 0.0) : memory[GOAL_LOCAL];
+    stays = phase == ARRIVED || (held ? stood : stays);
+    bool aims = goal.aimed && !(stays && stood);
+    out[GOAL_X] = aims ? (posed.local ? NAN : goal.point.x) : memory[GOAL_X];
+    out[GOAL_Y] = aims ? (posed.local ? NAN : goal.point.y) : memory[GOAL_Y];
+    out[GOAL_LOCAL] = aims ? (posed.local ? 1.0 : 0.0) : memory[GOAL_LOCAL];
     out[INTEGRAL] = integral;
     out[HEADING_BEFORE] = heading_before;
-    out[STOPPING] = stopping ? 1.0 : 0.0;
+    out[PROGRESS] = progress;
     out[PHASE] = phase;
-    out[SPARE] = 0.0;
+    out[STAYS] = stays ? 1.0 : 0.0;
 
     double half = 0.5 * given.w * (2.0 * half_track);
     const double all[RESULT] = {

@@ -30,6 +30,7 @@ from same_work import SAME, Array, Cart, address, build, differences, plain_row,
 from steerkit import Causes, Command, Controller, Decision, Measurement, Memory, Motion, Phase, Platform, Pose, Report, compiled
 from steerkit.compiled import kernel
 from steerkit.controller import PHASES, causes_of, record
+from steerkit.reading import PLAIN, numbers
 from steerkit.step import MEASURED, RESULT, step_kernel
 
 CASES = ("easy", "heavy")
@@ -102,11 +103,12 @@ class ThroughC:
     The leanest that was found: the memory rows are C arrays that NumPy looks at, so that no address has to be asked for.
     """
 
-    __slots__ = ("c_step", "first", "fixed", "measured", "pack", "result", "row_type", "settings", "unpack")
+    __slots__ = ("c_step", "first", "fixed", "measured", "pack", "result", "row_type", "settings", "shape", "unpack")
 
     def __init__(self, library: ctypes.CDLL, controller: Controller) -> None:
         self.settings = np.array(controller.settings)
-        self.first = controller.start(0.0).row.tolist()
+        start = controller.start(0.0).row
+        self.first, self.shape = start.tolist(), start.shape
         self.row_type = ctypes.c_double * len(self.first)
         self.measured = bytearray(8 * MEASURED)
         self.result = bytearray(8 * RESULT)
@@ -122,22 +124,30 @@ class ThroughC:
         )
 
     def start(self) -> Memory:
-        return Memory(np.frombuffer(self.row_type(*self.first)))
+        return Memory.of(np.frombuffer(self.row_type(*self.first)))
 
     def step(self, memory: Memory, measurement: Measurement) -> Decision:
-        at, pose, goal, pose_time, frame, speed, turn_rate, limit, hold, applied = measurement
-        x, y, heading = pose
-        goal_x, goal_y = goal
-        applied_v, applied_w = applied
-        told = (at, x, y, heading, pose_time, goal_x, goal_y, frame, speed, turn_rate, limit, hold, applied_v, applied_w, 0.0)
-        self.pack(self.measured, 0, *told)
+        try:
+            at, pose, goal, pose_time, frame, speed, turn_rate, limit, hold, applied = measurement
+            x, y, heading = pose
+            goal_x, goal_y = goal
+            applied_v, applied_w = applied
+            if not (pose.__class__ in PLAIN and goal.__class__ in PLAIN and applied.__class__ in PLAIN):
+                raise TypeError
+            told = (at, x, y, heading, pose_time, goal_x, goal_y, frame, speed, turn_rate, limit, hold, applied_v, applied_w, 0.0)
+            self.pack(self.measured, 0, *told)
+        except Exception:
+            self.pack(self.measured, 0, *numbers(measurement))
+        row = memory.row if isinstance(memory, Memory) else None
+        if row is None or row.shape != self.shape:
+            row = np.frombuffer(self.row_type(*[math.nan] * len(self.first)))
         settings, size, measured, result = self.fixed
         out = self.row_type()
-        self.c_step(settings, memory.row.base, size, measured, out, result)
+        self.c_step(settings, row.base, size, measured, out, result)
         r = self.unpack(self.result)
         report = record(Report, (r[6], r[7], record(Pose, r[8:11]), r[11], r[12:14], record(Motion, r[14:])))
-        memory = Memory(np.frombuffer(out))
-        return record(Decision, (record(Command, r[:4]), PHASES[int(r[4])], causes_of(int(r[5])), report, memory))
+        kept = Memory.of(np.frombuffer(out))
+        return record(Decision, (record(Command, r[:4]), PHASES[int(r[4])], causes_of(int(r[5])), report, kept))
 
 
 # --- timing -----------------------------------------------------------------------------------------------------------------------

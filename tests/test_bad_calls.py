@@ -59,7 +59,7 @@ BAD_CALLS = [
         "track width wider than the footprint",
         "platform(track_width=0.7)",
         ValueError,
-        "track_width=0.7 m must be <= 0.6 m; the wheels stand inside the footprint, 2 * radius: measure both again",
+        "track_width=0.7 m must be <= 0.6 m; the wheels stand inside the footprint, 2 * radius (the robot's, not the wheel's)",
     ),
     (
         "track width a string",
@@ -131,7 +131,7 @@ BAD_CALLS = [
         "period in milliseconds",
         "platform(period=50)",
         ValueError,
-        "period=50 s must be <= 2 s; is it in milliseconds? give the time between two control steps",
+        "period=50 s must be <= 2 s; is it in milliseconds or Hz? give the time between two control steps",
     ),
     (
         "period none",
@@ -492,5 +492,5 @@ def test_idle_limits_are_told_not_refused():
     notes = platform(wheel_speed_limit=0.4).notes()
     assert notes == [
         "The wheels give 0.4 m/s; speed_limit=0.9 m/s is never reached.",
-        "The wheels give 1.9 rad/s on the spot; turn_rate_limit=2 rad/s is never reached.",
+        "The wheels give 1.9 rad/s on the spot; turn_rate_limit=2 rad/s is never reached; is it in degrees per second?",
     ]

@@ -103,6 +103,9 @@ def test_a_decision_prints_readably():
     assert "goal" in text
     assert "turn acceleration limit" in text
     assert Causes.NONE.words() == "nothing to report"
+    held = str(cruising().go(pose=(NAN, 0.0, 0.0), goal=None))
+    assert held.startswith("held: +0.")
+    assert "nan" not in held
     assert "Unguarded" in str(cruising().steering)
 
 

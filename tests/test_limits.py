@@ -101,6 +101,8 @@ def test_stopping_distance_by_hand():
     assert stopping_distance(2.0, braking=1.0) == 2.0  # 2 s at 1 m/s on average
     assert stopping_distance(2.0, braking=1.0, reaction=0.5) == 3.0
     assert stopping_distance(0.0, braking=1.0, reaction=0.5) == 0.0
+    assert speed_to_stop_within(2.0, braking=1.0) == 2.0
+    assert speed_to_stop_within(3.0, braking=1.0, reaction=0.5) == 2.0
 
 
 def test_speed_to_stop_within_gives_the_worked_value():
@@ -280,6 +282,7 @@ def time_between(p, before, after):
         pytest.param((0.8, 1), (0.8, 1), (0.8, 1), Causes.NONE, id="at the limits of speed and wheels"),
         pytest.param((0.8, 0), (0.8 + 5e-10, 0), (0.8, 0), Causes.NONE, id="too fast by too little to count"),
         pytest.param((0.8, 0), (0.8 + 5e-9, 0), (0.8, 0), Causes.SPEED_LIMIT, id="too fast by just enough to count"),
+        pytest.param((-0.3, 0), (-0.3 - 5e-10, 0), (-0.3, 0), Causes.NONE, id="too fast backwards by too little to count"),
         pytest.param((0, 0), (0.5, 0), (0.1, 0), Causes.ACCELERATION_LIMIT, id="a start"),
         pytest.param((0, 0), (-0.25, 0), (-0.1, 0), Causes.ACCELERATION_LIMIT, id="a start backwards"),
         pytest.param((0.5, 0), (0.1, 0), (0.3, 0), Causes.BRAKING_LIMIT, id="braking"),

@@ -219,7 +219,7 @@ class Controller:
         lines = [
             f"Constant speed {rounded_down(self.speed):g} m/s ({kept}; bound by {w.bound}).",
             f"Heading gain {self.gain:.4g} 1/s; those from {w.low:.4g} to {w.high:.4g} 1/s work.",
-            f"Turn rate up to {w.ceiling:.3g} rad/s.",
+            f"Turn rate up to {min(self.settings.ceiling, self.platform.top_turn_rate):.3g} rad/s.",
             "Unguarded: no range sensor; nothing here looks for obstacles.",
         ]
         return "\n".join(lines + self.platform.notes())

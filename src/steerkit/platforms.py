@@ -87,7 +87,7 @@ class Platform:
     acceleration: float = number("m/s^2", "give the steepest gain of speed without slip", 100.0, "mm/s^2")
     braking: float = number("m/s^2", "give the steepest loss of speed without slip, as a positive number", 100.0, "mm/s^2")
     turn_acceleration: float = number("rad/s^2", "give the steepest change of turn rate", 1000.0, "degrees per second squared")
-    period: float = number("s", "give the time between two control steps", 2.0, "milliseconds")
+    period: float = number("s", "give the time between two control steps", 2.0, "milliseconds or Hz")
     dead_time: float = number("s", "give the time from a true pose to the wheels' answer", 5.0, "milliseconds")
     motor_lag: float = number("s", "give the time constant of the wheels, 0 if not seen", 5.0, "milliseconds", 0.0)
     position_noise: float = number("m", "give the standard deviation of a coordinate at rest", 10.0, "millimetres", 0.0)
@@ -102,7 +102,7 @@ class Platform:
             self.track_width,
             "m",
             2.0 * self.radius,
-            "the wheels stand inside the footprint, 2 * radius: measure both again",
+            "the wheels stand inside the footprint, 2 * radius (the robot's, not the wheel's)",
         )
 
     @property
@@ -125,7 +125,8 @@ class Platform:
         spot = 2.0 * self.wheel_speed_limit / self.track_width
         if self.turn_rate_limit > spot:
             found.append(
-                f"The wheels give {spot:.3g} rad/s on the spot; turn_rate_limit={self.turn_rate_limit:.3g} rad/s is never reached."
+                f"The wheels give {spot:.3g} rad/s on the spot; turn_rate_limit={self.turn_rate_limit:.3g} rad/s is never reached; "
+                "is it in degrees per second?"
             )
         return found
 

@@ -237,7 +237,6 @@ class Decision(NamedTuple):
 
     def __str__(self) -> str:
         c, r = self.command, self.report
-        return (
-            f"{self.phase.name.lower()}: {c.speed:+.3f} m/s, {c.turn_rate:+.3f} rad/s; "
-            f"goal {r.distance:.3f} m away, {math.degrees(r.heading_error):+.1f} deg off ({self.causes.words()})"
-        )
+        away = f"goal {r.distance:.3f} m away" if r.distance == r.distance else "goal at an unknown distance"
+        off = f", {math.degrees(r.heading_error):+.1f} deg off" if r.heading_error == r.heading_error else ""
+        return f"{self.phase.name.lower()}: {c.speed:+.3f} m/s, {c.turn_rate:+.3f} rad/s; {away}{off} ({self.causes.words()})"
