@@ -309,7 +309,7 @@ static double way_ahead(double distance, double error, double radius)
 static bool stop_kept(
     Pose p, Motion before, double goal_x, double goal_y, double radius, double braking, double turn_acceleration, double path)
 {
-    if (fabs(before.w) * path > PI * before.v) {
+    if (before.v > 0.0 && fabs(before.w) * path > PI * before.v) {
         double curve = before.v / before.w;
         double away = distance_to(p.x - curve * sin(p.heading), p.y + curve * cos(p.heading), goal_x, goal_y);
         return away + fabs(curve) <= radius;

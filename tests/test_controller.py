@@ -437,6 +437,15 @@ def test_a_motion_that_these_wheels_cannot_have_been_given_is_told_and_left_out(
     assert decision.command == expected.command
 
 
+@pytest.mark.parametrize("applied", [(-0.3, 0.0), (-0.3, 0.5), (0.0, -1.0), (-1e-9, 0.0)])
+@pytest.mark.parametrize("goal", [(-2.0, 0.1), (0.05, 0.0), (2.0, 0.0)])
+def test_a_robot_that_was_driven_backwards_brakes_and_drives_on(applied, goal):
+    robot = Robot(controller(platform=cart(dead_time=0.1)), goal=goal)
+    decision = robot.go(applied=applied)
+    assert 0.0 <= decision.command.speed - applied[0] <= max(1.2, 0.8) * T * (1.0 + 1e-9)
+    assert robot.go(400).phase == Phase.ARRIVED
+
+
 def test_a_robot_measured_rolling_has_not_arrived():
     robot = Robot(controller(platform=cart(dead_time=0.1)), goal=(0.1, 0.0))
     assert robot.go(3).phase == Phase.ARRIVED

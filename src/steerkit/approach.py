@@ -64,7 +64,7 @@ def stop_kept_kernel(
 
     One of more than half a turn counts only where its whole circle lies within.
     """
-    if abs(w0) * path > PI * v0:
+    if v0 > 0.0 and abs(w0) * path > PI * v0:
         curve = v0 / w0
         away, _ = bearing_kernel(x - curve * math.sin(heading), y + curve * math.cos(heading), goal_x, goal_y)
         return away + abs(curve) <= radius

@@ -16,7 +16,7 @@ __all__ = ["Platform"]
 
 VERSION = 1
 SHORTEST_PERIOD = 1e-4  # s
-SMALLEST = 1e-6  # of any other number that is not 0
+SMALLEST = 1e-6  # of any other number that may not be 0
 VERSION_KEY = "steerkit_platform_version"
 
 
@@ -168,10 +168,10 @@ def needed(one: Field[Any]) -> bool:
 def checked(one: Field[Any], value: object) -> float:
     """Return one number checked: finite, of the right sign, and not a wrong unit."""
     told = one.metadata
-    check = check_not_negative if one.name == "dead_time" or not needed(one) else check_above_zero
-    size = check(one.name, value, told["unit"], told["measure"])
+    may_be_zero = one.name == "dead_time" or not needed(one)
+    size = (check_not_negative if may_be_zero else check_above_zero)(one.name, value, told["unit"], told["measure"])
     least = SHORTEST_PERIOD if one.name == "period" else SMALLEST
-    if 0.0 < size < least:
+    if size < least and not may_be_zero:
         raise ValueError(f"{one.name}={shown(size, told['unit'])} must be >= {shown(least, told['unit'])}; {told['measure']}")
     if size > told["most"]:
         raise ValueError(
