@@ -434,6 +434,12 @@ BAD_CALLS = [
         "reaction=-0.5 s must be >= 0; give the time before the brakes act",
     ),
     (
+        "stopping from backwards",
+        "limits.stopping_distance(-1.0, 1.0)",
+        ValueError,
+        "speed=-1 m/s must be >= 0; give its size",
+    ),
+    (
         "held stop backwards",
         "limits.held_stopping_distance(-1.0, 1.0, 0.1)",
         ValueError,

@@ -662,6 +662,13 @@ BRAKING, PERIOD = "give the steady deceleration of a full stop", "give the contr
 @pytest.mark.parametrize(
     ("call", "text"),
     [
+        (lambda: limit(CART, (math.nan, 0), (1, 0)), "before[0]=nan m/s must be finite; give the speed of the command before"),
+        (
+            lambda: limit(CART, (0, math.inf), (1, 0)),
+            "before[1]=inf rad/s must be finite; give the turn rate of the command before",
+        ),
+        (lambda: limit(CART, (0, 0), (math.inf, 0)), "wanted[0]=inf m/s must be finite; give the speed that is wanted"),
+        (lambda: limit(CART, (0, 0), (1, math.nan)), "wanted[1]=nan rad/s must be finite; give the turn rate that is wanted"),
         (lambda: stopping_distance(1.0, 0.0), f"braking=0 m/s^2 must be > 0; {BRAKING}"),
         (lambda: stopping_distance(1.0, 1.0, -0.1), "reaction=-0.1 s must be >= 0; give the time before the brakes act"),
         (lambda: speed_to_stop_within(1.0, -2.0), f"braking=-2 m/s^2 must be > 0; {BRAKING}"),
@@ -702,3 +709,8 @@ def test_limit_kernel_gives_the_bits_of_plain_python(p, v0, w0, v, w):
 def test_held_kernels_give_the_bits_of_plain_python(number, braking, period):
     assert held_stop_kernel(number, braking, period) == held_stop_kernel.py_func(number, braking, period)
     assert held_speed_kernel(number, braking, period, 2.0) == held_speed_kernel.py_func(number, braking, period, 2.0)
+
+
+def test_without_an_end_to_the_way_there_is_none_to_the_speed():
+    assert speed_to_stop_within(math.inf, 1.0) == math.inf
+    assert held_speed_to_stop_within(math.inf, 1.0, 0.1) == math.inf

@@ -1,8 +1,9 @@
 """Limits: what the wheels can do next, and how far it takes to stop.
 
 Metres, seconds, radians. A command is held for one period, and differs from the one before by at most one period's worth of
-acceleration, braking and turn acceleration. Where a limit binds, speed and turn rate shrink together: the robot keeps to its
-curve and takes longer, and does not cut the corner. Formulas of the held stop: derived (sums of the held speeds).
+acceleration, braking and turn acceleration. Where a limit of speed, turn rate or wheels binds, speed and turn rate shrink together:
+the robot keeps to its curve and takes longer, and does not cut the corner. Formulas of the held stop: derived (sums of the held
+speeds).
 """
 
 from __future__ import annotations
@@ -59,8 +60,9 @@ def limit_kernel(
     """Return the motion nearest to (v, w) that may follow (v0, w0), and which limits bound.
 
     In order: (v, w) shrunk along its curve into the limits of speed, turn rate and wheel speed; then the speed as near as a
-    period allows, the turn rate going with the speed really reached; then, where the wheels still cannot do both, the two
-    shrunk together again. (0, 0) brakes along the curve of (v0, w0). A limit that is broken already is approached at full rate.
+    period allows, the turn rate, while it brakes, going with the speed really reached (while it gains speed it turns as asked);
+    then, where the wheels still cannot do both, less of both as far as a period allows. (0, 0) brakes along the curve of
+    (v0, w0). A limit that is broken already is approached at full rate.
     """
     bound = 0
     share = 1.0
@@ -185,7 +187,8 @@ def stopping_distance(speed: float, braking: float, reaction: float = 0.0) -> fl
     """
     b = check_above_zero("braking", braking, "m/s^2", "give the steady deceleration of a full stop")
     t = check_not_negative("reaction", reaction, "s", "give the time before the brakes act")
-    return speed * t + speed * speed / (2.0 * b)
+    v = check_not_negative("speed", speed, "m/s", "give its size")
+    return v * t + v * v / (2.0 * b)
 
 
 def speed_to_stop_within(distance: float, braking: float, reaction: float = 0.0) -> float:
@@ -207,6 +210,8 @@ def speed_to_stop_within(distance: float, braking: float, reaction: float = 0.0)
     b = check_above_zero("braking", braking, "m/s^2", "give the steady deceleration of a full stop")
     t = check_not_negative("reaction", reaction, "s", "give the time before the brakes act")
     d = max(0.0, float(distance))
+    if d == math.inf:
+        return math.inf
     return 2.0 * b * d / (b * t + math.sqrt(b * b * t * t + 2.0 * b * d)) if d > 0.0 else 0.0
 
 
