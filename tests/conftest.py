@@ -9,3 +9,9 @@ if os.environ.get("STEERKIT_TEST_WITHOUT_NUMBA"):
     sys.modules["numba"] = None  # type: ignore[assignment]
 
 os.environ.setdefault("MPLBACKEND", "Agg")
+
+from hypothesis import settings
+
+settings.register_profile("fixed", derandomize=True, deadline=None)
+settings.register_profile("wide", deadline=None)  # pytest --hypothesis-profile wide: other examples each time
+settings.load_profile("fixed")

@@ -251,7 +251,7 @@ def share_within(p, wanted):
     shares = [1.0]
     shares += [top / abs(v)] if v else []
     shares += [p.turn_rate_limit / abs(w)] if w else []
-    shares += [p.wheel_speed_limit / wheel_speed(p, wanted)] if v or w else []
+    shares += [p.wheel_speed_limit / wheel_speed(p, wanted)] if wheel_speed(p, wanted) else []
     return min(shares)
 
 

@@ -151,8 +151,8 @@ def difference(target: ArrayLike, origin: ArrayLike) -> float | Array:
 def unwrap(angles: ArrayLike, axis: int = -1) -> Array:
     """Return `angles` with whole turns added so that no step along `axis` exceeds half a turn.
 
-    Whole turns of the float 2 pi are added. A step of exactly half a turn is left as it is (as in `numpy.unwrap`). Unlike there, a NaN or infinite sample spoils only
-    itself: the ones behind it are joined to the last finite one.
+    Whole turns of the float 2 pi are added. A step of exactly half a turn is left as it is (as in `numpy.unwrap`). Unlike there,
+    a NaN or infinite sample spoils only itself: the ones behind it are joined to the last finite one.
 
     Parameters
     ----------
