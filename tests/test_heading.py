@@ -245,6 +245,10 @@ def test_a_stop_along_the_curve_begins_inside_one_radius_and_goes_on_inside_the_
         assert approach(**circle, goal=(0.0, 0.0))[2:] == (0.0, STOPPING)
         assert approach(**circle, goal=(0.0, 0.085))[2:] == (0.0, STOPPING)
         assert approach(**circle, goal=(0.0, 0.095))[3] == CAPTURED
+    for heading in (0.3, 1.1, 2.5, -0.7):  # the same circle from other places on it
+        place = {"x": 0.10 * math.sin(heading), "y": -0.10 * math.cos(heading), "heading": heading, "v0": 1.5, "w0": 15.0}
+        assert approach(**place, goal=(0.0, 0.085))[2:] == (0.0, STOPPING)
+        assert approach(**place, goal=(0.0, 0.095))[3] == CAPTURED
 
 
 def test_a_disc_that_was_passed_through_is_come_back_to_slowly():
