@@ -31,6 +31,12 @@ def test_the_law_is_gain_times_the_short_way_round():
     assert steer(law, HeadingMemory(), 1.0, 0.25, 0.1)[0] == 1.5
 
 
+def test_a_law_is_proportional_unless_told_otherwise():
+    assert HeadingLaw(1.0, 2.0) == (1.0, 2.0, math.inf, 0.0)
+    turning = HeadingMemory(integral=9.0, heading=-1.0)
+    assert steer(HeadingLaw(1.0, 2.0), turning, 1.0, 0.0, 0.1)[0] == 1.0
+
+
 def test_the_ceiling_holds_both_ways():
     law = HeadingLaw(gain=2.0, ceiling=0.7)
     assert steer(law, HeadingMemory(), 1.0, 0.0, 0.1)[0] == 0.7
