@@ -112,7 +112,7 @@ def draw(count: int, only: list[str], rng: random.Random) -> list[tuple[str, str
     return chosen
 
 
-def survives(mutant: tuple[str, str, int, str, str]) -> str:
+def caught_by(mutant: tuple[str, str, int, str, str]) -> str:
     """Return the name of the lane that caught the mutant, or an empty text."""
     name, _, _, _, text = mutant
     with tempfile.TemporaryDirectory() as place:
@@ -147,13 +147,13 @@ def main() -> None:
     parser.add_argument("--only", nargs="*", default=list(ASKED), choices=FILES)
     parser.add_argument("--workers", type=int, default=2)
     chosen = parser.parse_args()
-    sound = survives(("angles", "none", 0, "", (ROOT / "src" / "steerkit" / "angles.py").read_text()))
-    if sound:
-        raise SystemExit(f"without any fault the tests fail: {sound}")
+    trouble = caught_by(("angles", "none", 0, "", (ROOT / "src" / "steerkit" / "angles.py").read_text()))
+    if trouble:
+        raise SystemExit(f"without any fault the tests fail: {trouble}")
     mutants = draw(chosen.count, chosen.only, random.Random(chosen.seed))
     left = []
     with ThreadPoolExecutor(chosen.workers) as workers:
-        for mutant, caught in zip(mutants, workers.map(survives, mutants), strict=True):
+        for mutant, caught in zip(mutants, workers.map(caught_by, mutants), strict=True):
             name, kind, line, source, _ = mutant
             print(f"{'caught' if caught else 'SURVIVED':8}  {name}.py:{line}  {kind}  {source}  [{caught}]", flush=True)
             if not caught:

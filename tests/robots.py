@@ -1,4 +1,7 @@
-"""The one distribution from which random robots are drawn, here and in later work. Committed before any tuning."""
+"""The robots of the tests: one cart, and the one distribution from which random robots are drawn.
+
+The distribution, here and in later work, was committed before any tuning.
+"""
 
 from __future__ import annotations
 
@@ -28,6 +31,24 @@ EVEN = {  # uniform, for zero is in range
     "motor_lag": (0.0, 0.15),
     "wheel_share": (0.0, 1.0),  # wheel-speed limit from "either alone" (0) to "speed and turn rate together" (1)
 }
+
+CART = {
+    "radius": 0.30,
+    "track_width": 0.42,
+    "wheel_speed_limit": 1.1,
+    "speed_limit": 0.9,
+    "turn_rate_limit": 2.0,
+    "acceleration": 0.8,
+    "braking": 1.2,
+    "turn_acceleration": 5.0,
+    "period": 0.05,
+    "dead_time": 0.12,
+}
+
+
+def cart(**changes: float) -> Platform:
+    """Return the cart of the single tests, some of its numbers changed."""
+    return Platform(**(CART | changes))
 
 
 class Robot(NamedTuple):

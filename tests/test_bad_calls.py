@@ -6,24 +6,9 @@ import math  # noqa: F401  the calls below are evaluated here
 
 import pytest
 
+from robots import CART
+from robots import cart as platform
 from steerkit import Controller, Platform, angles, kinematics, limits, sizing  # noqa: F401
-
-CART = {
-    "radius": 0.30,
-    "track_width": 0.42,
-    "wheel_speed_limit": 1.1,
-    "speed_limit": 0.9,
-    "turn_rate_limit": 2.0,
-    "acceleration": 0.8,
-    "braking": 1.2,
-    "turn_acceleration": 5.0,
-    "period": 0.05,
-    "dead_time": 0.12,
-}
-
-
-def platform(**changes):
-    return Platform(**(CART | changes))
 
 
 def controller(**changes):
@@ -482,16 +467,16 @@ def test_the_speed_a_refusal_proposes_works(call, text):
 
 
 def test_a_platform_survives_its_own_file():
-    cart = platform(motor_lag=0.07, position_noise=0.012, reverse_speed_limit=0.25)
-    assert Platform.from_json(cart.to_json()) == cart
-    assert '"turn_rate_limit_rad_per_s": 2.0' in cart.to_json()
+    ours = platform(motor_lag=0.07, position_noise=0.012, reverse_speed_limit=0.25)
+    assert Platform.from_json(ours.to_json()) == ours
+    assert '"turn_rate_limit_rad_per_s": 2.0' in ours.to_json()
 
 
 def test_numbers_of_other_kinds_become_floats():
     import numpy as np
 
-    cart = platform(radius=np.float32(0.5), period=np.float64(0.05), wheel_speed_limit=1)
-    assert all(type(getattr(cart, name)) is float for name in CART)
+    ours = platform(radius=np.float32(0.5), period=np.float64(0.05), wheel_speed_limit=1)
+    assert all(type(getattr(ours, name)) is float for name in CART)
 
 
 def test_idle_limits_are_told_not_refused():

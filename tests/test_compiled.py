@@ -11,6 +11,7 @@ from pathlib import Path
 import pytest
 
 import steerkit
+from robots import cart
 from steerkit import Controller, Measurement, compiled
 from steerkit.step import fresh_kernel, in_place_kernel, step_kernel
 
@@ -61,22 +62,6 @@ def test_a_second_call_compiles_nothing_whatever_comes():
     Controller(cart(dead_time=0.4), capture_radius=0.1).start(5)
     assert [len(one.signatures) for one in (step_kernel, in_place_kernel, fresh_kernel)] == before
     assert not step_kernel._can_compile
-
-
-def cart(**changes):
-    numbers = {
-        "radius": 0.30,
-        "track_width": 0.42,
-        "wheel_speed_limit": 1.1,
-        "speed_limit": 0.9,
-        "turn_rate_limit": 2.0,
-        "acceleration": 0.8,
-        "braking": 1.2,
-        "turn_acceleration": 5.0,
-        "period": 0.05,
-        "dead_time": 0.12,
-    }
-    return steerkit.Platform(**(numbers | changes))
 
 
 SCRIPT = """

@@ -9,28 +9,13 @@ import numpy as np
 import pytest
 
 from closed_loop import drive
+from robots import cart
 from steerkit import Causes, Controller, Frame, Measurement, Memory, Phase, Platform, compiled
 from steerkit.kinematics import arc, sighting, to_robot
 from steerkit.signals import HEAD
 
 NAN, INF = math.nan, math.inf
 T = 0.05
-CART = {
-    "radius": 0.30,
-    "track_width": 0.42,
-    "wheel_speed_limit": 1.1,
-    "speed_limit": 0.9,
-    "turn_rate_limit": 2.0,
-    "acceleration": 0.8,
-    "braking": 1.2,
-    "turn_acceleration": 5.0,
-    "period": T,
-    "dead_time": 0.12,
-}
-
-
-def cart(**changes):
-    return Platform(**(CART | changes))
 
 
 def controller(capture_radius=0.2, platform=None, **changes):

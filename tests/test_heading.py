@@ -178,7 +178,7 @@ def test_a_stop_ends_where_it_is_said_to(v, w, braking, turn_acceleration, perio
     """Against the stop step by step through `limits.limit`, on the same held motions."""
     platform = robot(braking, turn_acceleration, period)
     path = held_stop_kernel(max(0.0, v - braking * period), braking, period)
-    end = stop_end_kernel(0.0, 0.0, 0.0, v, w, braking, turn_acceleration, period, path)
+    end = stop_end_kernel(0.0, 0.0, 0.0, v, w, braking, turn_acceleration, path)
     pose, motion = np.zeros(3), (v, w)
     while motion[0] > 0.0:
         motion, _ = limit(platform, motion, (0.0, 0.0))
@@ -195,7 +195,7 @@ def test_a_stop_ends_where_it_is_said_to(v, w, braking, turn_acceleration, perio
 @given(st.floats(0.05, 1.5), st.floats(0.1, 6.0), st.floats(0.3, 3.0), st.floats(1.0, 20.0))
 def test_a_stop_never_leaves_its_circle_of_curvature(v, w, braking, turn_acceleration):
     path = held_stop_kernel(v, braking, 0.02)
-    x, y = stop_end_kernel(0.0, 0.0, 0.0, v, w, braking, turn_acceleration, 0.02, path)
+    x, y = stop_end_kernel(0.0, 0.0, 0.0, v, w, braking, turn_acceleration, path)
     assert math.hypot(x, y - v / w) <= v / w * (1.0 + 1e-9)
 
 

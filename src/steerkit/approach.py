@@ -57,7 +57,6 @@ def stop_kept_kernel(
     radius: float,
     braking: float,
     turn_acceleration: float,
-    period: float,
     path: float,
 ) -> bool:
     """Say whether the stop of length `path` along the present curve ends within `radius` of the goal.
@@ -68,7 +67,7 @@ def stop_kept_kernel(
         curve = v0 / w0
         away, _ = bearing_kernel(x - curve * math.sin(heading), y + curve * math.cos(heading), goal_x, goal_y)
         return away + abs(curve) <= radius
-    end_x, end_y = stop_end_kernel(x, y, heading, v0, w0, braking, turn_acceleration, period, path)
+    end_x, end_y = stop_end_kernel(x, y, heading, v0, w0, braking, turn_acceleration, path)
     away, _ = bearing_kernel(end_x, end_y, goal_x, goal_y)
     return away <= radius
 
@@ -112,6 +111,6 @@ def constant_speed_kernel(
     if NEAR * capture_radius < way < math.inf and path <= way + aim_radius:
         return bearing, distance, speed, reached
     radius = capture_radius if progress == STOPPING else stop_radius
-    if stop_kept_kernel(x, y, heading, v0, w0, goal_x, goal_y, radius, braking, turn_acceleration, period, path):
+    if stop_kept_kernel(x, y, heading, v0, w0, goal_x, goal_y, radius, braking, turn_acceleration, path):
         return bearing, distance, 0.0, STOPPING
     return bearing, distance, speed, reached

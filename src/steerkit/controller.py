@@ -65,7 +65,7 @@ class Controller:
     driving: +0.040 m/s, +0.000 rad/s; goal 2.000 m away, +0.0 deg off (acceleration limit)
     """
 
-    __slots__ = ("_empty", "_plain", "_row", "_rows", "_size", "capture_radius", "platform", "settings", "window")
+    __slots__ = ("_plain", "_row", "_rows", "_size", "capture_radius", "platform", "settings", "window")
 
     def __init__(
         self,

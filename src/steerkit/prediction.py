@@ -143,7 +143,7 @@ def coast_kernel(x: float, y: float, heading: float, v: float, w: float, lag: fl
 
 @kernel
 def stop_end_kernel(
-    x: float, y: float, heading: float, v: float, w: float, braking: float, turn_acceleration: float, period: float, path: float
+    x: float, y: float, heading: float, v: float, w: float, braking: float, turn_acceleration: float, path: float
 ) -> tuple[float, float]:
     """Return where a stop from the motion (v, w) ends, `path` metres on: along the curve, which tightens where w falls too slowly.
 

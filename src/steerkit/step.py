@@ -64,7 +64,7 @@ GOAL_X, GOAL_Y, INTEGRAL, HEADING_BEFORE, PROGRESS, PHASE, GOAL_LOCAL, STAYS = r
 # BASE is the motion of the wheels, as modelled, BASE_AGE before the last step: no pose in use is older.
 # STAYS: arrived, and to stand still until the goal or the robot is moved.
 
-MEASURED = 15  # numbers of a measurement: `controller.numbers` lists them
+MEASURED = 15  # numbers of a measurement: `reading.numbers` lists them
 RESULT = 16  # numbers of a result: left, right, speed, turn rate, phase, causes, heading error, distance, pose, age, goal, wanted
 
 Result = tuple[float, float, float, float, float, float, float, float, float, float, float, float, float, float, float, float]
