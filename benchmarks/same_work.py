@@ -198,7 +198,7 @@ def prove_parts(library: ctypes.CDLL, rng: np.random.Generator) -> None:
     for _ in range(1000):
         stop = np.concatenate([rng.normal(0.0, 2.0, 5), rng.uniform(0.1, 2.0, 3)])
         x, y, heading, v, w, braking, turn_acceleration, path = stop.tolist()
-        end = stop_end_kernel(x, y, heading, v, w, braking, turn_acceleration, 0.05, path)
+        end = stop_end_kernel(x, y, heading, v, w, braking, turn_acceleration, path)
         prove_part(library.stop_end_alone, stop, end)
         motions = np.concatenate([rng.normal(0.0, 1.0, 4), rng.uniform(0.1, 2.0, 5), rng.uniform(0.05, 0.5, 3)])
         motions[[0, 2, 3, 5]] *= rng.random(4) < 0.7  # at rest, a stop, straight on, forward only
