@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import dataclasses
 import hashlib
 import sys
 
@@ -20,13 +21,19 @@ def digest(robots: int = 20, steps: int = 500) -> str:
     found = hashlib.sha256()
     for i in range(robots):
         robot = draw(rng)
-        extra = {"integral_time": 3.0, "derivative_time": 0.01} if i % 4 == 3 else {}
-        controller = Controller(robot.platform, capture_radius=robot.capture_radius, predict=bool(i % 3), **extra)
+        law = {"constant_speed": True, "predict": bool(i % 3)} if i % 2 else {}
+        if i % 4 == 3:
+            law |= {"integral_time": 3.0, "derivative_time": 0.01}
+        platform = robot.platform
+        if i % 5 == 2:
+            platform = dataclasses.replace(platform, smallest_wheel_speed=0.02, wheel_speed_resolution=0.007)
+        controller = Controller(platform, capture_radius=robot.capture_radius, **law)
         memory, pose, period = controller.start(0.0), draw_start(rng, robot), robot.platform.period
         for k in range(steps):
             goal = (0.0, 0.0) if k < steps // 2 else (1.0, -2.0)
             seen = tuple(pose) if rng.random() > 0.02 else (np.nan, 0.0, 0.0)
-            decision = controller.step(memory, Measurement(k * period, seen, goal, pose_time=(k - 0.3) * period))
+            then = (1.0, -2.0) if i % 3 == 0 and k < steps // 2 else None
+            decision = controller.step(memory, Measurement(k * period, seen, goal, (k - 0.3) * period, next_goal=then))
             memory = decision.memory
             found.update(memory.to_bytes() + np.array([*decision.command, *decision.report[:2], decision.causes]).tobytes())
             pose = arc(pose, decision.command[2:], period)

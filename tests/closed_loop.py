@@ -44,7 +44,7 @@ def drive_kernel(settings, memory, dead_time, lag, start, motion, goal, steps, u
     nan = math.nan
     for k in range(steps):
         time = k * period
-        measured = (time, x, y, heading, nan, goal[0], goal[1], 0.0, nan, nan, nan, 0.0, nan, nan, 0.0)
+        measured = (time, x, y, heading, nan, goal[0], goal[1], 0.0, nan, nan, nan, 0.0, nan, nan, nan, nan, 0.0)
         r = step_kernel(settings, memory, measured, memory)
         sent[k + d + 1, 0], sent[k + d + 1, 1] = r[2], r[3]
         log[k, 0], log[k, 1], log[k, 2], log[k, 3], log[k, 4] = x, y, heading, r[2], r[3]

@@ -37,7 +37,7 @@ def linear_robot(period: float, dead_time: float = 0.0, motor_lag: float = 0.0) 
 
 def heading_errors(platform, gain, duration, predict, ceiling=FREE, e0=1.0, motor_lag=None):
     """Return the heading error at each step of the library's loop toward a goal far away, its limits lifted."""
-    controller = Controller(platform, capture_radius=0.3).unchecked(
+    controller = Controller(platform, capture_radius=0.3, constant_speed=True).unchecked(
         gain=gain,
         ceiling=ceiling,
         top_turn_rate=FREE,
@@ -98,7 +98,7 @@ def orbit_errors(robots: int, seed: int) -> list[float]:
     while len(errors) < robots:
         robot = draw(rng)
         predict = bool(rng.integers(2))
-        controller = Controller(robot.platform, capture_radius=robot.capture_radius, predict=predict)
+        controller = Controller(robot.platform, capture_radius=robot.capture_radius, constant_speed=True, predict=predict)
         s = controller.settings
         gain = controller.gain * rng.uniform(0.2, 0.5)
         if not predict and gain * (s.dead_time + s.motor_lag) > 0.5:  # the circle attracts below 0.7315 (derived)
@@ -160,12 +160,12 @@ def window_drives(robots: int, starts: int, seed: int) -> Drives:
     for i in range(robots):
         robot = draw(rng)
         try:
-            controller = Controller(robot.platform, capture_radius=robot.capture_radius)
+            controller = Controller(robot.platform, capture_radius=robot.capture_radius, constant_speed=True)
             if i % 2:
                 speed = controller.speed * rng.uniform(0.3, 1.0)
                 found = sizing.window(robot.platform, robot.capture_radius, speed)
                 gain = found.low * (found.high / found.low) ** rng.random()
-                controller = Controller(robot.platform, capture_radius=robot.capture_radius, speed=speed, gain=gain)
+                controller = Controller(robot.platform, capture_radius=robot.capture_radius, constant_speed=True, speed=speed, gain=gain)
         except ValueError:
             refused += 1
             continue
@@ -187,7 +187,7 @@ def below_the_window(robots: int, seed: int) -> tuple[int, int]:
     captured = 0
     for _ in range(robots):
         robot = draw(rng)
-        controller = Controller(robot.platform, capture_radius=robot.capture_radius)
+        controller = Controller(robot.platform, capture_radius=robot.capture_radius, constant_speed=True)
         gain = 0.8 * sizing.window(robot.platform, robot.capture_radius, controller.speed).low
         loose = controller.unchecked(gain=gain)
         radius = sizing.orbit_radius(controller.speed, gain, controller.settings.ceiling)
@@ -211,7 +211,7 @@ def above_the_stability(robots: int, seed: int) -> tuple[int, int]:
     for i in range(robots):
         robot = draw(rng)
         predict = bool(i % 2)
-        controller = Controller(robot.platform, capture_radius=robot.capture_radius, predict=predict)
+        controller = Controller(robot.platform, capture_radius=robot.capture_radius, constant_speed=True, predict=predict)
         p = robot.platform
         limit = sizing.stable_gain(p.period) if predict else sizing.stable_gain(p.period, p.dead_time, p.motor_lag)
         log = drive(
@@ -243,7 +243,7 @@ def faster_than_workable(robots: int, seed: int, factor: float = 1.25) -> Faster
     for _ in range(robots):
         robot = draw(rng)
         p, radius = robot.platform, robot.capture_radius
-        controller = Controller(p, capture_radius=radius)
+        controller = Controller(p, capture_radius=radius, constant_speed=True)
         why = controller.window.bound
         bound[why] += 1
         if why in ("speed_limit", "wheel_speed_limit"):
@@ -280,12 +280,12 @@ def proposed_speeds(robots: int, seed: int) -> tuple[int, int]:
     for _ in range(robots):
         robot = draw(rng)
         try:
-            Controller(robot.platform, capture_radius=robot.capture_radius, speed=robot.platform.top_speed)
+            Controller(robot.platform, capture_radius=robot.capture_radius, constant_speed=True, speed=robot.platform.top_speed)
         except ValueError as refusal:
             refused += 1
             proposal = float(str(refusal).rsplit(" m/s or less", 1)[0].rsplit(" ", 1)[1])
             try:
-                Controller(robot.platform, capture_radius=robot.capture_radius, speed=proposal)
+                Controller(robot.platform, capture_radius=robot.capture_radius, constant_speed=True, speed=proposal)
             except ValueError:
                 again += 1
     return refused, again
@@ -310,7 +310,7 @@ def limit_storm(steps: int, seed: int) -> Storm:
     while made < steps:
         robot = draw(rng)
         p = robot.platform
-        controller = Controller(p, capture_radius=robot.capture_radius)
+        controller = Controller(p, capture_radius=robot.capture_radius, constant_speed=bool(made % 1000))
         memory, time = controller.start(0.0), 0.0
         wild = rng.choice([0.0, -1.0, 1e-9, 1e3, math.nan, math.inf, -math.inf, 1e300], size=(500, 14))
         fields = np.where(rng.random((500, 14)) < 0.02, wild, rng.normal(0.0, 3.0, (500, 14)))

@@ -361,7 +361,7 @@ def test_an_old_pose_taken_for_a_new_one_would_swing():
 def test_start_accepts_a_robot_already_moving():
     robot = Robot(controller(platform=cart(dead_time=0.1)), goal=(5.0, 0.0), motion=(0.5, -0.4))
     decision = robot.go()
-    assert decision.command.speed == pytest.approx(0.5 - 1.2 * T)
+    assert decision.command.speed == pytest.approx(0.5 + 0.8 * T)
     assert abs(decision.command.turn_rate + 0.4) <= 5.0 * T * (1 + 1e-12)
     # the prediction knows of the motion: 0.1 s at 0.5 m/s and -0.4 rad/s
     assert decision.report.heading_error == pytest.approx(0.04 + math.atan2(0.001, 4.95), abs=1e-3)
@@ -478,7 +478,7 @@ def test_a_fast_robot_that_passes_its_goal_comes_back_and_does_not_circle():
         period=0.05,
         dead_time=0.0,
     )
-    log = drive(Controller(platform, capture_radius=0.3), (-0.32, -0.71, -2.0), steps=1000, until=2)
+    log = drive(Controller(platform, capture_radius=0.3, constant_speed=True), (-0.32, -0.71, -2.0), steps=1000, until=2)
     assert log[-1, 5] == Phase.ARRIVED
     touched = np.flatnonzero(log[:, 8] <= 0.3)[0]
     assert log[touched, 3] > 1.0
@@ -604,7 +604,8 @@ def test_the_integral_takes_out_a_pull_to_one_side_and_does_not_wind_up():
     """Wheels of unequal size: the robot turns 0.05 rad/s too much. P leaves an error, PI takes it out."""
     left = {}
     for name, integral_time in (("P", INF), ("PI", 2.0)):
-        robot = Robot(controller(0.3, cart(dead_time=0.1), speed=0.3, gain=1.0, integral_time=integral_time), goal=(80.0, 0.0))
+        steering = controller(0.3, cart(dead_time=0.1), constant_speed=True, speed=0.3, gain=1.0, integral_time=integral_time)
+        robot = Robot(steering, goal=(80.0, 0.0))
         for _ in range(700):
             decision = robot.go()
             x, y, heading = robot.pose
@@ -615,7 +616,7 @@ def test_the_integral_takes_out_a_pull_to_one_side_and_does_not_wind_up():
 
 
 def test_the_integral_recovers_from_saturation_and_is_reset_by_a_new_goal():
-    steering = controller(0.3, cart(dead_time=0.1), speed=0.3, gain=1.0, integral_time=1.0)
+    steering = controller(0.3, cart(dead_time=0.1), constant_speed=True, speed=0.3, gain=1.0, integral_time=1.0)
     robot = Robot(steering, goal=(-40.0, 0.5))
     least = min(robot.go().report.heading_error for _ in range(400))
     # leaving saturation at e = ceiling/gain, nothing wound up, the loop is e'' + e' + e = 0 with e' = -e (derived)
@@ -631,8 +632,8 @@ def test_the_integral_recovers_from_saturation_and_is_reset_by_a_new_goal():
 
 def test_the_derivative_gives_no_kick_at_a_new_goal():
     platform = cart(dead_time=0.1, turn_acceleration=900.0, turn_rate_limit=20.0)
-    with_d = Controller(platform, capture_radius=0.3, speed=0.3, gain=2.0, derivative_time=0.2)
-    without = Controller(platform, capture_radius=0.3, speed=0.3, gain=2.0)
+    with_d = Controller(platform, capture_radius=0.3, constant_speed=True, speed=0.3, gain=2.0, derivative_time=0.2)
+    without = Controller(platform, capture_radius=0.3, constant_speed=True, speed=0.3, gain=2.0)
     wanted = []
     for steering in (with_d, without):
         robot = Robot(steering, goal=(50.0, 0.0))
@@ -645,9 +646,8 @@ def test_the_derivative_damps():
     platform = cart(dead_time=0.1, turn_acceleration=900.0, turn_rate_limit=20.0)
     rates = []
     for derivative_time in (0.0, 0.2):
-        robot = Robot(
-            Controller(platform, capture_radius=0.3, speed=0.3, gain=2.0, derivative_time=derivative_time), goal=(0.0, 50.0)
-        )
+        law = {"speed": 0.3, "gain": 2.0, "derivative_time": derivative_time}
+        robot = Robot(Controller(platform, capture_radius=0.3, constant_speed=True, **law), goal=(0.0, 50.0))
         rates.append(max(robot.go().command.turn_rate for _ in range(10)))
         robot.go(5)
     assert rates[1] <= rates[0]

@@ -14,10 +14,12 @@ from numpy.typing import NDArray
 
 from steerkit import compiled, sizing
 from steerkit.checks import check_above_zero, check_not_negative, rounded_down, rounded_up, shown
+from steerkit.intake import BELIEVED, MEASURED
+from steerkit.memory_row import FAR, fresh_kernel
 from steerkit.platforms import Platform
-from steerkit.reading import FIFTEEN, PLAIN, numbers
-from steerkit.signals import HEAD, Causes, Command, Decision, Measurement, Memory, Motion, Phase, Pose, Report
-from steerkit.step import BELIEVED, FAR, MEASURED, RESULT, Settings, fresh_kernel, in_place_kernel, step_kernel
+from steerkit.reading import PLAIN, SEVENTEEN, numbers
+from steerkit.signals import HEAD, Causes, Command, Decision, Measurement, Memory, Motion, Phase, Pose, Report, Slowing
+from steerkit.step import RESULT, Settings, in_place_kernel, step_kernel
 
 __all__ = ["Controller", "InPlace"]
 
@@ -25,9 +27,14 @@ Array = NDArray[np.float64]
 
 NAN = math.nan
 PHASES = tuple(Phase)
+SLOWING = tuple(Slowing)
 record = tuple.__new__  # fills a named tuple past its own constructor, in two thirds of the time
-causes_of = functools.cache(Causes)  # at most 2**15 of them
+causes_of = functools.cache(Causes)  # at most 2**16 of them
 PRINTED = 1e-3  # a gain that was read from a sentence, four digits, is one of the window
+FLAGS = {
+    "constant_speed": "True drives at constant speed, False by the schedule",
+    "predict": "True takes the error where the command takes effect",
+}
 NOISE_RADII = 8.0  # standard deviations of position that the capture radius must span
 
 
@@ -72,6 +79,7 @@ class Controller:
         platform: Platform,
         *,
         capture_radius: float,
+        constant_speed: bool = False,
         speed: float | None = None,
         gain: float | None = None,
         integral_time: float = math.inf,
@@ -83,11 +91,19 @@ class Controller:
             raise TypeError(f"platform={platform!r} must be a Platform; build one from the robot's measured numbers")
         self.platform = platform
         self.capture_radius = checked_radius(platform, capture_radius)
-        if not isinstance(predict, (bool, np.bool_)):
-            raise TypeError(f"predict={predict!r} must be True or False; True takes the error where the command takes effect")
-        self.window = sizing.window(platform, self.capture_radius, checked_speed(platform, speed), bool(predict))
-        cruise = self.window.fastest if speed is None else float(speed)
-        check_window(platform, self.window, cruise, self.capture_radius)
+        for name, flag in (("constant_speed", constant_speed), ("predict", predict)):
+            if not isinstance(flag, (bool, np.bool_)):
+                raise TypeError(f"{name}={flag!r} must be True or False; {FLAGS[name]}")
+        self.window = None
+        cruise, ceiling, chosen = platform.top_speed, platform.top_turn_rate, 1.0 / settling_time(platform)
+        if constant_speed:
+            self.window = sizing.window(platform, self.capture_radius, checked_speed(platform, speed), bool(predict))
+            cruise, ceiling = self.window.fastest if speed is None else float(speed), self.window.ceiling
+            check_window(platform, self.window, cruise, self.capture_radius)
+            chosen = checked_gain(platform, self.window, gain, integral_time, derivative_time, predict)
+        else:
+            check_scheduled(speed=speed, gain=gain, integral_time=integral_time, derivative_time=derivative_time, predict=predict)
+        slowest = platform.slowest_wheel_speed
         depth = sizing.stop_depth(self.capture_radius, platform.position_noise)
         self._set(
             Settings(
@@ -106,16 +122,26 @@ class Controller:
                 heading_noise=platform.heading_noise,
                 capture_radius=self.capture_radius,
                 stay_radius=self.capture_radius + 4.0 * platform.position_noise,
-                stop_radius=self.capture_radius * (1.0 - depth / 2.0),
-                aim_radius=self.capture_radius * (1.0 - max(depth, 0.2)),
+                stop_radius=self.capture_radius * (1.0 - depth / 2.0) if constant_speed else self.capture_radius - max(2.0*platform.position_noise,0.02*self.capture_radius),
+                aim_radius=self.capture_radius * (1.0 - max(depth, 0.2)) if constant_speed else self.capture_radius - max(4.0*platform.position_noise,0.05*self.capture_radius),
                 cruise=cruise,
-                ceiling=self.window.ceiling,
-                gain=checked_gain(platform, self.window, gain, integral_time, derivative_time, predict),
+                ceiling=ceiling,
+                gain=chosen,
                 integral_time=float(integral_time),
                 derivative_time=float(derivative_time),
                 predict=float(bool(predict)),
                 stale_after=checked_age(platform, stale_after),
                 rest_radius=self.capture_radius - 2.0 * platform.position_noise,
+                scheduled=float(not constant_speed),
+                settling=1.0 / chosen,
+                smallest_wheel_speed=platform.smallest_wheel_speed,
+                wheel_speed_step=platform.wheel_speed_resolution,
+                most_raised=min(
+                    sizing.CHORD * self.capture_radius / platform.period,
+                    platform.top_turn_rate * platform.track_width / 2.0,
+                    max(3.0 * slowest, 0.1 * platform.top_speed),
+                    platform.top_speed,
+                ),
             )
         )
 
@@ -130,16 +156,16 @@ class Controller:
         readable = np.zeros(self._size)
         readable.setflags(write=False)
         compiled.compile_once(step_kernel, self._row, readable, (0.0,) * MEASURED, np.zeros(self._size))
-        compiled.compile_once(fresh_kernel, np.zeros(self._size), self._rows, 0.0, 0.0, 0.0, 0.0, 0.0)
+        compiled.compile_once(fresh_kernel, np.zeros(self._size), self._rows, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0)
 
     @property
     def speed(self) -> float:
-        """Constant speed, m/s."""
+        """Fastest speed that it drives at, m/s."""
         return self.settings.cruise
 
     @property
     def gain(self) -> float:
-        """Heading gain, 1/s."""
+        """Heading gain, 1/s; with the schedule, that of the last of a turn."""
         return self.settings.gain
 
     def unchecked(self, **changes: float) -> Controller:
@@ -162,7 +188,8 @@ class Controller:
                 "twice wheel_speed_limit; give m/s and rad/s"
             )
         row = np.empty(self._size)
-        fresh_kernel(row, self._rows, began, v, w, self.settings.period, self.settings.stale_after)  # type: ignore[arg-type]
+        s = self.settings
+        fresh_kernel(row, self._rows, began, v, w, s.period, s.stale_after, s.smallest_wheel_speed)  # type: ignore[arg-type]
         return Memory.of(row)
 
     def step(self, memory: Memory, measurement: Measurement) -> Decision:
@@ -180,17 +207,17 @@ class Controller:
             Drive `command`, keep `memory` for the next step; `phase`, `causes` and `report` say why.
         """
         try:
-            time, pose, goal, pose_time, frame, speed, turn_rate, limit, hold, applied = measurement
+            time, pose, goal, pose_time, frame, speed, turn_rate, limit, hold, applied, next_goal = measurement
             x, y, heading = pose  # type: ignore[misc]  # None, like anything else, goes the slower way below
             goal_x, goal_y = goal  # type: ignore[misc]
             applied_v, applied_w = applied  # type: ignore[misc]
-            if not (pose.__class__ in PLAIN and goal.__class__ in PLAIN and applied.__class__ in PLAIN):
+            next_x, next_y = next_goal  # type: ignore[misc]
+            if not (
+                pose.__class__ in PLAIN and goal.__class__ in PLAIN and applied.__class__ in PLAIN and next_goal.__class__ in PLAIN
+            ):
                 raise TypeError
-            measured = FIFTEEN.unpack(
-                FIFTEEN.pack(
-                    time, x, y, heading, pose_time, goal_x, goal_y, frame, speed, turn_rate, limit, hold, applied_v, applied_w, 0.0
-                )
-            )
+            first = (time, x, y, heading, pose_time, goal_x, goal_y, frame, speed, turn_rate, limit, hold)
+            measured = SEVENTEEN.unpack(SEVENTEEN.pack(*first, applied_v, applied_w, next_x, next_y, 0.0))
         except Exception:  # anything at all may stand in a measurement
             measured = numbers(measurement)
         row = memory.row if isinstance(memory, Memory) else None
@@ -203,7 +230,8 @@ class Controller:
             kept = [0.0] * self._size
             r = step_kernel(self._plain, row.tolist(), measured, kept)
             out[:] = kept
-        report = record(Report, (r[6], r[7], record(Pose, r[8:11]), r[11], r[12:14], record(Motion, r[14:])))
+        wanted, slowed_by = record(Motion, r[14:16]), SLOWING[int(r[16])]
+        report = record(Report, (r[6], r[7], record(Pose, r[8:11]), r[11], r[12:14], wanted, slowed_by, r[17]))
         return record(Decision, (record(Command, r[:4]), PHASES[int(r[4])], causes_of(int(r[5])), report, Memory.of(out)))
 
     def in_place(self, time: float, motion: tuple[float, float] = (0.0, 0.0)) -> InPlace:
@@ -214,14 +242,21 @@ class Controller:
         return f"Controller(speed={self.speed:.4g} m/s, gain={self.gain:.4g} 1/s, capture_radius={self.capture_radius:.4g} m)"
 
     def __str__(self) -> str:
-        w = self.window
-        kept = "the fastest workable" if self.speed == w.fastest else f"the fastest workable is {rounded_down(w.fastest):g} m/s"
-        lines = [
-            f"Constant speed {rounded_down(self.speed):g} m/s ({kept}; bound by {w.bound}).",
-            f"Heading gain {self.gain:.4g} 1/s; those from {w.low:.4g} to {w.high:.4g} 1/s work.",
-            f"Turn rate up to {min(self.settings.ceiling, self.platform.top_turn_rate):.3g} rad/s.",
-            "Unguarded: no range sensor; nothing here looks for obstacles.",
-        ]
+        s, w = self.settings, self.window
+        turning = f"Turn rate up to {min(s.ceiling, self.platform.top_turn_rate):.3g} rad/s."
+        if w is None:
+            lines = [
+                f"Speed by schedule, up to {rounded_down(self.speed):g} m/s; braking ends {s.aim_radius:.3g} m from the goal.",
+                turning + f" The last of a turn takes {s.settling:.3g} s.",
+            ]
+        else:
+            kept = "the fastest workable" if self.speed == w.fastest else f"the fastest workable is {rounded_down(w.fastest):g} m/s"
+            lines = [
+                f"Constant speed {rounded_down(self.speed):g} m/s ({kept}; bound by {w.bound}).",
+                f"Heading gain {self.gain:.4g} 1/s; those from {w.low:.4g} to {w.high:.4g} 1/s work.",
+                turning,
+            ]
+        lines.append("Unguarded: no range sensor; nothing here looks for obstacles.")
         return "\n".join(lines + self.platform.notes())
 
 
@@ -233,11 +268,11 @@ class InPlace:
 
     MEASURED = (
         *("time", "x", "y", "heading", "pose_time", "goal_x", "goal_y", "goal_frame", "speed", "turn_rate"),
-        *("speed_limit", "hold", "applied_speed", "applied_turn_rate", "garbage"),
+        *("speed_limit", "hold", "applied_speed", "applied_turn_rate", "next_goal_x", "next_goal_y", "garbage"),
     )
     RESULT = (
         *("left", "right", "speed", "turn_rate", "phase", "causes", "heading_error", "distance", "x", "y", "heading"),
-        *("pose_age", "goal_x", "goal_y", "wanted_speed", "wanted_turn_rate"),
+        *("pose_age", "goal_x", "goal_y", "wanted_speed", "wanted_turn_rate", "slowed_by", "slowest"),
     )
     __slots__ = ("_arguments", "_controller", "measurement", "memory", "result", "row")
 
@@ -247,7 +282,7 @@ class InPlace:
         self.row = np.full(size + MEASURED + RESULT, NAN)
         self.memory, self.measurement, self.result = np.split(self.row, [size, size + MEASURED])
         self.memory[:] = memory.row
-        self.measurement[[7, 11, 14]] = 0.0
+        self.measurement[[7, 11, MEASURED - 1]] = 0.0
         self._arguments = (controller._row, self.row, size)
         compiled.compile_once(in_place_kernel, *self._arguments)
 
@@ -270,7 +305,32 @@ def checked_radius(platform: Platform, capture_radius: object) -> float:
             f"capture_radius={shown(radius, 'm')} must be >= {shown(rounded_up(least), 'm')}, eight standard deviations of "
             "position_noise; widen the disc or measure the pose better"
         )
+    slowest = platform.slowest_wheel_speed
+    least = slowest * platform.period / sizing.CHORD
+    if radius < least:
+        raise ValueError(
+            f"capture_radius={shown(radius, 'm')} must be >= {shown(rounded_up(least), 'm')}, for in one period at its smallest "
+            f"wheel speed, {shown(slowest, 'm/s')}, the robot passes over the disc; widen it, or shorten the period"
+        )
     return radius
+
+
+def settling_time(platform: Platform) -> float:
+    """Return the time constant (s) at which the schedule takes out the last of a heading error.
+
+    One period, where noise of the heading and an error of the delay allow it; see `sizing.chosen_gain`.
+    """
+    delay = platform.dead_time + platform.motor_lag
+    quiet = platform.heading_noise / (sizing.NOISE_SHARE * platform.top_turn_rate)
+    return max(platform.period, quiet, delay / sizing.DELAYS)
+
+
+def check_scheduled(**given: object) -> None:
+    """Refuse what only a constant speed has."""
+    idle = {"speed": None, "gain": None, "integral_time": math.inf, "derivative_time": 0.0, "predict": True}
+    for name, value in given.items():
+        if value is not idle[name] and value != idle[name]:
+            raise ValueError(f"{name}={value!r} is for constant_speed=True; pass that too, or leave {name} out")
 
 
 def checked_speed(platform: Platform, speed: object) -> float | None:

@@ -108,6 +108,48 @@ def limit_kernel(
 
 
 @kernel
+def turn_first_kernel(
+    v0: float,
+    w0: float,
+    v: float,
+    w: float,
+    top: float,
+    turn: float,
+    wheel: float,
+    half_track: float,
+    faster: float,
+    slower: float,
+    turning: float,
+) -> tuple[float, float, int]:
+    """Return the motion that may follow (v0, w0) and turns as asked, its speed what the wheels then leave; which limits bound.
+
+    Only the speed that a period cannot take away goes before the turn. Forwards only. A limit that is broken already is
+    approached at full rate.
+    """
+    bound = 0
+    low, high = reach_kernel(v0, faster, slower)
+    low = max(low, min(0.0, high))
+    least_v = max(0.0, low, -high)
+    least_w = max(0.0, abs(w0) - turning)
+    w1 = clip_kernel(w, w0 - turning, w0 + turning)
+    if abs(w1 - w) > ROUNDING:
+        bound |= TURN_ACCELERATION
+    most = max(least_w, min(turn, (wheel - least_v) / half_track))
+    if abs(w1) > most:
+        bound |= TURN_RATE if most == turn else WHEELS
+        w1 = clip_kernel(w1, -most, most)
+    aim = clip_kernel(v, 0.0, top)
+    v1 = clip_kernel(aim, low, high)
+    if abs(v1 - v) > ROUNDING:
+        bound |= BRAKING if v1 > aim else (ACCELERATION if v1 < aim else SPEED)
+    room = max(least_v, wheel - abs(w1) * half_track)
+    if abs(v1) > room:
+        bound |= WHEELS if abs(v1) > room * (1.0 + ROUNDING) else 0
+        v1 = clip_kernel(v1, -room, room)
+    return v1, w1, bound
+
+
+@kernel
 def held_stop_kernel(speed: float, braking: float, period: float) -> float:
     """Return the path (m) of a speed held for a period, then reduced by braking*period each period until it is zero."""
     step = braking * period

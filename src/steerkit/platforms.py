@@ -7,10 +7,11 @@ construction with a sentence, because a wrong unit here is a wrong gain later. T
 from __future__ import annotations
 
 import json
+import math
 from dataclasses import Field, dataclass, field, fields
 from typing import Any
 
-from steerkit.checks import check_above_zero, check_at_most, check_not_negative, shown
+from steerkit.checks import check_above_zero, check_at_most, check_not_negative, rounded_down, shown
 
 __all__ = ["Platform"]
 
@@ -65,6 +66,10 @@ class Platform:
         Standard deviation of the heading at rest. The same log.
     reverse_speed_limit : float, m/s
         Fastest backwards; 0: forward only.
+    smallest_wheel_speed : float, m/s
+        Below it a wheel that is told to move stands still; 0 if not seen. Log of a command that grows slowly from 0.
+    wheel_speed_resolution : float, m/s
+        The drive takes wheel speeds in multiples of this; 0: any. Data sheet of the drive, or the same log.
 
     Raises
     ------
@@ -93,6 +98,8 @@ class Platform:
     position_noise: float = number("m", "give the standard deviation of a coordinate at rest", 10.0, "millimetres", 0.0)
     heading_noise: float = number("rad", "give the standard deviation of the heading at rest", 0.5, "degrees", 0.0)
     reverse_speed_limit: float = number("m/s", "give the fastest speed backwards, 0 for none", 100.0, "mm/s", 0.0)
+    smallest_wheel_speed: float = number("m/s", "give the speed below which a wheel stands still, 0 if not seen", 10.0, "mm/s", 0.0)
+    wheel_speed_resolution: float = number("m/s", "give the step of the wheel-speed command, 0 for any", 10.0, "mm/s", 0.0)
 
     def __post_init__(self) -> None:
         for one in fields(self):
@@ -104,6 +111,15 @@ class Platform:
             2.0 * self.radius,
             "the wheels stand inside the footprint, 2 * radius (the robot's, not the wheel's)",
         )
+        check_slowest(self)
+
+    @property
+    def slowest_wheel_speed(self) -> float:
+        """Slowest that a wheel can be told to run: the least step of the resolution that moves it (m/s); 0 where any will do."""
+        step = self.wheel_speed_resolution
+        if step == 0.0:
+            return self.smallest_wheel_speed
+        return step * max(1.0, math.ceil(self.smallest_wheel_speed / step - 1e-9))
 
     @property
     def top_speed(self) -> float:
@@ -158,6 +174,24 @@ class Platform:
         if missing:
             raise ValueError(f"the platform file lacks {missing}; add them, each in the unit of its key")
         return cls(**{keys[key].name: value for key, value in rows.items()})
+
+
+def check_slowest(platform: Platform) -> None:
+    """Refuse a robot whose slowest wheel speed leaves it no straight drive or no turn on the spot."""
+    slowest = platform.slowest_wheel_speed
+    told = f"smallest_wheel_speed={shown(platform.smallest_wheel_speed, 'm/s')}"
+    if platform.wheel_speed_resolution > 0.0:
+        told += f" in steps of wheel_speed_resolution={shown(platform.wheel_speed_resolution, 'm/s')} ({shown(slowest, 'm/s')})"
+    for name in ("speed_limit", "wheel_speed_limit"):
+        most = getattr(platform, name)
+        if slowest > most:
+            raise ValueError(f"{told} must be <= {name}={shown(most, 'm/s')}, else the wheels never move; measure them again")
+    most = platform.turn_rate_limit * platform.track_width / 2.0
+    if slowest > most:
+        raise ValueError(
+            f"{told} must be <= turn_rate_limit * track_width / 2 = {shown(rounded_down(most), 'm/s')}, "
+            "else it cannot turn on the spot; raise the turn-rate limit"
+        )
 
 
 def needed(one: Field[Any]) -> bool:

@@ -1,4 +1,4 @@
-"""Reading: whatever stands in a measurement becomes fifteen floats. Never raises; what is no number is told.
+"""Reading: whatever stands in a measurement becomes seventeen floats. Never raises; what is no number is told.
 
 Plain tuples, lists and arrays of numbers are packed at once; all else goes through `numbers`, field by field.
 """
@@ -15,14 +15,14 @@ import numpy as np
 from steerkit.signals import Measurement, Motion, Pose
 
 NAN = math.nan
-FIFTEEN = Struct("15d")  # turns ints, float32 and bools into floats, and refuses strings, in a third of the time of float()
+SEVENTEEN = Struct("17d")  # turns ints, float32 and bools into floats, and refuses strings, in a third of the time of float()
 PLAIN = frozenset({tuple, list, np.ndarray, Pose, Motion})  # kinds of rows that are read at once
 ROWS = (tuple, list, np.ndarray)
 NUMBERS = (kinds.Real, np.bool_, np.ndarray, list, tuple)
 
 
 def numbers(measurement: Any) -> tuple[float, ...]:
-    """Return the fifteen numbers of any measurement: missing becomes NaN, what is no number the safer, and is told."""
+    """Return the seventeen numbers of any measurement: missing becomes NaN, what is no number the safer, and is told."""
     wrong = False
 
     def one(value: Any, otherwise: float = NAN) -> float:
@@ -60,7 +60,7 @@ def numbers(measurement: Any) -> tuple[float, ...]:
     except Exception:
         wrong = True
         fields = [None] * len(Measurement._fields)
-    time, pose, goal, pose_time, frame, speed, turn_rate, limit, hold, applied = fields
+    time, pose, goal, pose_time, frame, speed, turn_rate, limit, hold, applied, next_goal = fields
     return (
         one(time),
         *several(pose, 3),
@@ -72,5 +72,6 @@ def numbers(measurement: Any) -> tuple[float, ...]:
         one(limit, otherwise=0.0),
         one(hold, otherwise=1.0),
         *several(applied, 2),
+        *several(next_goal, 2),
         float(wrong),
     )

@@ -25,6 +25,7 @@ __all__ = [
     "Phase",
     "Pose",
     "Report",
+    "Slowing",
     "Wheels",
 ]
 
@@ -86,6 +87,9 @@ class Measurement(NamedTuple):
     applied : (float, float), m/s, rad/s
         The motion that the wheels were given during the period that ended now, where something overrode ours: a joystick, a
         safety controller, a drive that stopped by itself while the loop hung (0, 0).
+    next_goal : (float, float), m
+        Where there is one, `goal` is a way point: its disc is passed through without a stop, as fast as `next_goal` allows, and
+        the phase is PASSED once the robot cannot but touch it. Then give `next_goal` as `goal`.
     """
 
     time: float | None
@@ -98,6 +102,7 @@ class Measurement(NamedTuple):
     speed_limit: float | None = NAN
     hold: bool | float | None = False
     applied: Row | None = (NAN, NAN)
+    next_goal: Row | None = (NAN, NAN)
 
 
 class Command(NamedTuple):
@@ -117,6 +122,7 @@ class Phase(IntEnum):
     ==================  ==================================================  ========
     told to hold        or: no usable pose, goal or clock                   HELD
     neither             at rest (command 0, wheels < 1 cm/s) in the disc    ARRIVED
+    neither             a way point's disc is touched, or will surely be    PASSED
     neither             else                                                DRIVING
     ==================  ==================================================  ========
 
@@ -126,6 +132,7 @@ class Phase(IntEnum):
     DRIVING = 0
     ARRIVED = 1
     HELD = 2
+    PASSED = 3
 
 
 class Causes(IntFlag):
@@ -147,18 +154,38 @@ class Causes(IntFlag):
     BAD_FIELD = 4096
     BAD_MEMORY = 8192
     APPLIED_BY_OTHERS = 16384
+    NO_ANSWER = 32768
 
     def words(self) -> str:
         """Return the causes in plain words, separated by commas."""
         return ", ".join(one.name.lower().replace("_", " ") for one in Causes if one in self and one.name) or "nothing to report"
 
 
+class Slowing(IntEnum):
+    """What keeps the speed from being higher: exactly one."""
+
+    NONE = 0
+    """Nothing: it drives as fast as it ever shall."""
+    TURNING = 1
+    """The goal is off the heading."""
+    BRAKING = 2
+    """It brakes for the goal, or for a way point."""
+    STEP_LIMIT = 3
+    """The `speed_limit` of this step, or a pose that is carried for want of a new one."""
+    WHEEL_LIMIT = 4
+    """The wheels cannot turn as asked and run faster."""
+    ACCELERATION = 5
+    """It is gaining speed as fast as it may."""
+    STOPPING = 6
+    """It stands, or stops: in its disc, held, or for want of data."""
+
+
 class Report(NamedTuple):
     """What a log needs to explain the command.
 
     `heading_error` rad, at the pose where this command takes effect; `distance` m, now; `pose` carried to now (m, m, rad);
-    `pose_age` s; `goal` m, in the world frame; `wanted` the motion that approach and heading law ask for, before the limits of the
-    robot (m/s, rad/s).
+    `pose_age` s; `goal` m, in the world frame, the one driven to; `wanted` the motion that the laws ask for, before the limits of
+    the robot (m/s, rad/s); `slowed_by` what keeps the speed from being higher; `slowest` the smallest wheel speed in use (m/s).
     """
 
     heading_error: float
@@ -167,6 +194,8 @@ class Report(NamedTuple):
     pose_age: float
     goal: tuple[float, float]
     wanted: Motion
+    slowed_by: Slowing
+    slowest: float
 
 
 class Memory:
@@ -223,7 +252,7 @@ class Memory:
         return f"Memory(time={self.time!r}, command={self.command}, under_way={len(self.under_way)})"
 
 
-HEAD = 18  # floats of a memory row before the commands under way; their places are named in step.py
+HEAD = 27  # floats of a memory row before the commands under way; their places are named in memory_row.py
 
 
 class Decision(NamedTuple):
@@ -239,4 +268,10 @@ class Decision(NamedTuple):
         c, r = self.command, self.report
         away = f"goal {r.distance:.3f} m away" if r.distance == r.distance else "goal at an unknown distance"
         off = f", {math.degrees(r.heading_error):+.1f} deg off" if r.heading_error == r.heading_error else ""
-        return f"{self.phase.name.lower()}: {c.speed:+.3f} m/s, {c.turn_rate:+.3f} rad/s; {away}{off} ({self.causes.words()})"
+        slow = (
+            f"; slowed by {r.slowed_by.name.lower().replace('_', ' ')}"
+            if r.slowed_by not in (Slowing.NONE, Slowing.STOPPING)
+            else ""
+        )
+        does = f"{self.phase.name.lower()}: {c.speed:+.3f} m/s, {c.turn_rate:+.3f} rad/s"
+        return f"{does}; {away}{off}{slow} ({self.causes.words()})"
