@@ -117,7 +117,7 @@ def rough_kernel(settings, memory, truth, start, motion, goals, spans, noise, mo
     zero_from = 0.0  # since when the wheels have been told to stand
     acting, aim, now, nan = 0, 0, 0.0, math.nan
     rest, stopped, left, excess, stalls, changes, starts, last_sign, rested = -1.0, -1.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0, -1
-    slowest, distance, made = settings[27], 0.0, 0
+    slowest, distance, made, moved = settings[27], 0.0, 0, True
     for k in range(steps):
         if aim + 1 < len(goals) and k >= goals[aim + 1, 0]:
             aim += 1
@@ -164,18 +164,15 @@ def rough_kernel(settings, memory, truth, start, motion, goals, spans, noise, mo
             rest, rested = now, k
             since = truth[1] * math.log(REST / wheel) if wheel > 0.0 and truth[1] > 0.0 else math.inf
             rest = max(zero_from, now - since)
+        moves = v != 0.0 or w != 0.0
         if rest >= 0.0:
             left = max(left, distance - radius)
-            starts += (v != 0.0 or w != 0.0) and memory_still(log, k)
+            starts += moves and not moved
+        moved = moves
         made = k + 1
         if rest >= 0.0 and aim == len(goals) - 1 and k >= rested + more:
             break
     return rest, stopped, left, excess, stalls, changes, slowest, distance, starts, float(made)
-
-
-@kernel
-def memory_still(log, k):
-    return k > 0 and k < len(log) and log[k - 1, 5] == 0.0 and log[k - 1, 6] == 0.0
 
 
 COLUMNS = (
@@ -209,7 +206,9 @@ def rough_drive(
     memory = controller.start(0.0, motion).row.copy()
     truth_row = np.array(truth)
     places = (np.array(start, float), np.array(motion, float), np.array(goals, float).reshape(-1, 3))
-    got = Outcome(*rough_kernel(np.array(controller.settings), memory, truth_row, *places, spans, errors, more, measured_motion, rows))
+    got = Outcome(
+        *rough_kernel(np.array(controller.settings), memory, truth_row, *places, spans, errors, more, measured_motion, rows)
+    )
     return got, rows[: int(got.steps)] if log else rows[:0]
 
 

@@ -340,12 +340,12 @@ def shares(log: Log) -> Shares:
 
 @functools.cache
 def follower(period: float = CARRIAGE.period) -> Controller:
-    return Controller(replace(CARRIAGE, period=period), capture_radius=FOLLOW_RADIUS)
+    return Controller(replace(CARRIAGE, period=period), capture_radius=FOLLOW_RADIUS, constant_speed=True)
 
 
 @functools.cache
 def visitor() -> Controller:
-    return Controller(CARRIAGE, capture_radius=WAYPOINT_RADIUS)
+    return Controller(CARRIAGE, capture_radius=WAYPOINT_RADIUS, constant_speed=True)
 
 
 class Driven(NamedTuple):
@@ -628,7 +628,7 @@ def test_a_waypoint_left_out_is_seen():
 
 def test_a_waypoint_not_reached_is_seen():
     """A disc of 8 m lets the robot turn to the next waypoint too early for one of 5 m."""
-    wide = Controller(CARRIAGE, capture_radius=8.0)
+    wide = Controller(CARRIAGE, capture_radius=8.0, constant_speed=True)
     log = drive_waypoints(wide, waypoints()[:40])
     assert np.array_equal(captured(log, 8.0), waypoints()[:40])
     assert len(captured(log, WAYPOINT_RADIUS)) < 40

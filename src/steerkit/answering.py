@@ -19,6 +19,7 @@ from steerkit.memory_row import SILENT, SLOWEST, WATCH_HEADING, WATCH_PATH, WATC
 SILENT_PERIODS = 7.0  # without an answer, besides half of dead time and lag
 RAISE = 1.1
 FIRST = 0.01  # of the top speed: the first smallest speed of a robot that declared none
+LEAST = 1e-3  # of the smallest speed; below it a lag dies away
 SEEN = 0.25  # of the path that should have been run counts as an answer
 BLUR = 4.0 * math.sqrt(2.0)  # standard deviations of a pose
 
@@ -51,13 +52,12 @@ def watch_kernel(
     if posed:
         dx, dy = x - at_x, y - at_y
         seen = math.sqrt(dx * dx + dy * dy) + abs(difference_kernel(heading, at_heading)) * half_track
-        path += told * since
-        time = time + since if told > 0.0 else time
+        if told > LEAST * max(slowest, FIRST * top):
+            path += told * since
+            time += since
         if seen > max(BLUR * blur, SEEN * path):
             at_x, at_y, at_heading, path, time, silent = x, y, heading, 0.0, 0.0, 0.0
-        elif told == 0.0 and silent == 0.0 and seen > 0.0:
-            at_x, at_y, at_heading, path, time = x, y, heading, 0.0, 0.0
-        elif time > patience and path > 2.0 * BLUR * blur:
+        elif time > patience and path > max(2.0 * BLUR * blur, 0.5 * patience * slowest):
             path, time, silent = 0.0, 0.0, 1.0
             if told <= 2.0 * slowest or slowest == 0.0:
                 slowest = min(max(RAISE * slowest, FIRST * top), max(most, slowest))

@@ -2,7 +2,7 @@
 
 The robot steers at the nearer tangent of a disc inside the capture disc: once on it, it drives straight and brakes at the last
 moment, to end where braking may end. It turns on the spot only while that is faster than a curve (the structure of the quickest
-drive without ramps: turn, tightest curve, straight line; `travel_time`). On the way the speed is the least of
+drive without ramps: turn, tightest curve, straight line; `shortest`). On the way the speed is the least of
 
 - what can be held for a period and then be braked away before the disc, or to the speed allowed at a way point;
 - what lets the turn that is left end before the goal is abreast;
@@ -22,9 +22,12 @@ from steerkit.limits import held_speed_kernel, held_stop_kernel
 AIM, AIM_NEAR = 0.85, 0.95  # radius of the disc steered at, of the disc where braking ends; from two capture radii, within one
 GROWTH = 3.0  # that radius is at most this many times the circle of the top speed, in radians of the goal's width
 SHARE = 0.95  # of braking and turn acceleration is planned with; the rest is for what no plan knows
-TURN_SHARE = 0.75  # of the turning that is left the speed may spoil
+TURN_SHARE = 0.85  # of the turning that is left the speed may spoil
+NEAR = 1.25
+BEARING_SHARE = 0.6  # of the fastest turn the bearing of the goal may turn at most, that no error of speeds makes a circle
 LEAD = 0.4  # of the ramp of speed that a turn on the spot may run ahead of
 LEAST_GATE = 0.05  # rad; an error below this never stops the robot
+TINY = 1e-12
 PI = math.pi
 FREE, TURNING, BRAKING = 0.0, 1.0, 2.0  # what holds the speed down; the step adds its own
 
@@ -65,12 +68,15 @@ def entering_kernel(way: float, passing: float, braking: float, period: float, t
 
 @kernel
 def slow_kernel(
-    speed: float, rate: float, off: float, turning: bool, slowest: float, half_track: float, period: float
+    speed: float, rate: float, off: float, turning: bool, slowest: float, half_track: float, period: float, tightest: float
 ) -> tuple[float, float]:
-    """Return speed and turn rate (>= 0) where the wheels stand still below `slowest`: drive no slower, or turn on the spot."""
+    """Return speed and turn rate (>= 0) where the wheels stand still below `slowest`: drive no slower, or turn on the spot.
+
+    On the spot also where a curve at `slowest`, of radius `tightest`, might circle the goal.
+    """
     if slowest <= 0.0 or speed >= slowest:
         return speed, rate
-    if turning and speed < 0.5 * slowest and off * half_track >= 0.5 * slowest * period:
+    if turning and (speed < 0.5 * slowest or slowest > tightest * rate) and off * half_track >= 0.5 * slowest * period:
         return 0.0, max(rate, slowest / half_track)
     return slowest, rate
 
@@ -109,7 +115,7 @@ def schedule_kernel(
         return 0.0, 0.0, BRAKING
     size = abs(error)
     off = size - math.asin(aim / distance)
-    if off <= 0.0:
+    if off <= TINY:
         across = distance * math.sin(size)
         way = distance * math.cos(size) - math.sqrt(max(0.0, target_radius * target_radius - across * across))
         speed = entering_kernel(way, passing, b, period, top)
@@ -131,9 +137,11 @@ def schedule_kernel(
     if off <= max(LEAST_GATE, ahead - math.atan2(peak / quick, far)):
         left = turn_time_kernel(off, w0 * side, al, turn) + period
         cap = off * far / (left * 2.0 * TURN_SHARE * math.sin(min(off, PI / 2.0)))
+        if distance < NEAR * target_radius:
+            cap = min(cap, BEARING_SHARE * turn * distance / max(TINY, abs(math.sin(size))))
     if cap < speed:
         speed, why = cap, TURNING
-    speed, rate = slow_kernel(speed, rate, off, why == TURNING, slowest, half_track, period)
+    speed, rate = slow_kernel(speed, rate, off, why == TURNING, slowest, half_track, period, 0.5 * target_radius)
     return speed, side * rate, why
 
 
@@ -162,7 +170,7 @@ def passing_kernel(
     b, al = SHARE * braking, SHARE * turn_acceleration
     speed = held_speed_kernel(distance - target_radius, b, period, top)
     off = size - math.asin(aim / distance)
-    if off <= 0.0:
+    if off <= TINY:
         return speed
     far = math.sqrt(distance * distance - aim * aim)
     left = turn_time_kernel(off, 0.0, al, turn) + period
