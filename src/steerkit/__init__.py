@@ -18,6 +18,7 @@ if TYPE_CHECKING:
     from steerkit.signals import Phase as Phase
     from steerkit.signals import Pose as Pose
     from steerkit.signals import Report as Report
+    from steerkit.signals import Slowing as Slowing
     from steerkit.signals import Wheels as Wheels
 
 HOMES = {
@@ -33,6 +34,7 @@ HOMES = {
     "Phase": "signals",
     "Pose": "signals",
     "Report": "signals",
+    "Slowing": "signals",
     "Wheels": "signals",
 }
 
@@ -49,6 +51,7 @@ __all__ = [
     "Platform",
     "Pose",
     "Report",
+    "Slowing",
     "Wheels",
 ]
 __version__ = "0.1.0"
