@@ -12,14 +12,16 @@ import math
 import numpy as np
 from numpy.typing import NDArray
 
-from steerkit import compiled, sizing
-from steerkit.checks import check_above_zero, check_not_negative, rounded_down, rounded_up, shown
+from steerkit import compiled
+from steerkit.checks import rounded_down, shown
 from steerkit.intake import BELIEVED, MEASURED
 from steerkit.memory_row import FAR, fresh_kernel
 from steerkit.platforms import Platform
 from steerkit.reading import PLAIN, SEVENTEEN, numbers
+from steerkit.settings import Settings, check_flags, check_scheduled, checked_radius, constant_settings, scheduled_settings
 from steerkit.signals import HEAD, Causes, Command, Decision, Measurement, Memory, Motion, Phase, Pose, Report, Slowing
-from steerkit.step import RESULT, Settings, in_place_kernel, step_kernel
+from steerkit.sizing import Window
+from steerkit.step import RESULT, in_place_kernel, step_kernel
 
 __all__ = ["Controller", "InPlace"]
 
@@ -30,24 +32,21 @@ PHASES = tuple(Phase)
 SLOWING = tuple(Slowing)
 record = tuple.__new__  # fills a named tuple past its own constructor, in two thirds of the time
 causes_of = functools.cache(Causes)  # at most 2**16 of them
-PRINTED = 1e-3  # a gain that was read from a sentence, four digits, is one of the window
-FLAGS = {
-    "constant_speed": "True drives at constant speed, False by the schedule",
-    "predict": "True takes the error where the command takes effect",
-}
-NOISE_RADII = 8.0  # standard deviations of position that the capture radius must span
 
 
 class Controller:
-    """Drives a platform to goals at constant speed.
+    """Drives a platform to goals: nearly as fast as its limits allow, or at constant speed.
 
     Parameters
     ----------
     platform : Platform
     capture_radius : float, m
         Disc about the goal within which the middle of the axle shall come to rest.
+    constant_speed : bool
+        Drive at constant speed, with a heading gain; else (default) by the schedule, which slows for turns and brakes late.
+        The next five are for constant speed only.
     speed : float, m/s, optional
-        Constant speed; the fastest workable one if not given. Above that one construction refuses.
+        The fastest workable one if not given. Above that one construction refuses.
     gain : float, 1/s, optional
         Heading gain; chosen in the window of `sizing` if not given. Outside the window construction refuses.
     integral_time, derivative_time : float, s
@@ -69,7 +68,7 @@ class Controller:
     >>> controller = Controller(cart, capture_radius=0.10)
     >>> decision = controller.step(controller.start(time=0.0), Measurement(time=0.0, pose=(0, 0, 0), goal=(2, 0)))
     >>> print(decision)
-    driving: +0.040 m/s, +0.000 rad/s; goal 2.000 m away, +0.0 deg off (acceleration limit)
+    driving: +0.040 m/s, +0.000 rad/s; goal 2.000 m away, +0.0 deg off; slowed by acceleration (acceleration limit)
     """
 
     __slots__ = ("_plain", "_row", "_rows", "_size", "capture_radius", "platform", "settings", "window")
@@ -89,61 +88,17 @@ class Controller:
     ) -> None:
         if not isinstance(platform, Platform):
             raise TypeError(f"platform={platform!r} must be a Platform; build one from the robot's measured numbers")
+        check_flags(constant_speed=constant_speed, predict=predict)
         self.platform = platform
         self.capture_radius = checked_radius(platform, capture_radius)
-        for name, flag in (("constant_speed", constant_speed), ("predict", predict)):
-            if not isinstance(flag, (bool, np.bool_)):
-                raise TypeError(f"{name}={flag!r} must be True or False; {FLAGS[name]}")
-        self.window = None
-        cruise, ceiling, chosen = platform.top_speed, platform.top_turn_rate, 1.0 / settling_time(platform)
+        self.window: Window | None = None
+        law = {"speed": speed, "gain": gain, "integral_time": integral_time, "derivative_time": derivative_time, "predict": predict}
         if constant_speed:
-            self.window = sizing.window(platform, self.capture_radius, checked_speed(platform, speed), bool(predict))
-            cruise, ceiling = self.window.fastest if speed is None else float(speed), self.window.ceiling
-            check_window(platform, self.window, cruise, self.capture_radius)
-            chosen = checked_gain(platform, self.window, gain, integral_time, derivative_time, predict)
+            settings, self.window = constant_settings(platform, self.capture_radius, stale_after, **law)  # type: ignore[arg-type]
         else:
-            check_scheduled(speed=speed, gain=gain, integral_time=integral_time, derivative_time=derivative_time, predict=predict)
-        slowest = platform.slowest_wheel_speed
-        depth = sizing.stop_depth(self.capture_radius, platform.position_noise)
-        self._set(
-            Settings(
-                period=platform.period,
-                dead_time=platform.dead_time,
-                motor_lag=platform.motor_lag,
-                top_speed=platform.top_speed,
-                reverse_speed=platform.reverse_speed_limit,
-                top_turn_rate=platform.turn_rate_limit,
-                wheel_speed=platform.wheel_speed_limit,
-                half_track=platform.track_width / 2.0,
-                acceleration=platform.acceleration,
-                braking=platform.braking,
-                turn_acceleration=platform.turn_acceleration,
-                position_noise=platform.position_noise,
-                heading_noise=platform.heading_noise,
-                capture_radius=self.capture_radius,
-                stay_radius=self.capture_radius + 4.0 * platform.position_noise,
-                stop_radius=self.capture_radius * (1.0 - depth / 2.0) if constant_speed else self.capture_radius - max(2.0*platform.position_noise,0.02*self.capture_radius),
-                aim_radius=self.capture_radius * (1.0 - max(depth, 0.2)) if constant_speed else self.capture_radius - max(4.0*platform.position_noise,0.05*self.capture_radius),
-                cruise=cruise,
-                ceiling=ceiling,
-                gain=chosen,
-                integral_time=float(integral_time),
-                derivative_time=float(derivative_time),
-                predict=float(bool(predict)),
-                stale_after=checked_age(platform, stale_after),
-                rest_radius=self.capture_radius - 2.0 * platform.position_noise,
-                scheduled=float(not constant_speed),
-                settling=1.0 / chosen,
-                smallest_wheel_speed=platform.smallest_wheel_speed,
-                wheel_speed_step=platform.wheel_speed_resolution,
-                most_raised=min(
-                    sizing.CHORD * self.capture_radius / platform.period,
-                    platform.top_turn_rate * platform.track_width / 2.0,
-                    max(3.0 * slowest, 0.1 * platform.top_speed),
-                    platform.top_speed,
-                ),
-            )
-        )
+            check_scheduled(**law)
+            settings = scheduled_settings(platform, self.capture_radius, stale_after)
+        self._set(settings)
 
     def _set(self, settings: Settings) -> None:
         self.settings = settings
@@ -295,99 +250,3 @@ class InPlace:
             self.result[:] = step_kernel(self._controller._plain, kept, self.measurement.tolist(), kept)
             self.memory[:] = kept
         return self.result
-
-
-def checked_radius(platform: Platform, capture_radius: object) -> float:
-    radius = check_above_zero("capture_radius", capture_radius, "m", "give the disc about the goal to come to rest in")
-    least = NOISE_RADII * platform.position_noise
-    if radius < least:
-        raise ValueError(
-            f"capture_radius={shown(radius, 'm')} must be >= {shown(rounded_up(least), 'm')}, eight standard deviations of "
-            "position_noise; widen the disc or measure the pose better"
-        )
-    slowest = platform.slowest_wheel_speed
-    least = slowest * platform.period / sizing.CHORD
-    if radius < least:
-        raise ValueError(
-            f"capture_radius={shown(radius, 'm')} must be >= {shown(rounded_up(least), 'm')}, for in one period at its smallest "
-            f"wheel speed, {shown(slowest, 'm/s')}, the robot passes over the disc; widen it, or shorten the period"
-        )
-    return radius
-
-
-def settling_time(platform: Platform) -> float:
-    """Return the time constant (s) at which the schedule takes out the last of a heading error.
-
-    One period, where noise of the heading and an error of the delay allow it; see `sizing.chosen_gain`.
-    """
-    delay = platform.dead_time + platform.motor_lag
-    quiet = platform.heading_noise / (sizing.NOISE_SHARE * platform.top_turn_rate)
-    return max(platform.period, quiet, delay / sizing.DELAYS)
-
-
-def check_scheduled(**given: object) -> None:
-    """Refuse what only a constant speed has."""
-    idle = {"speed": None, "gain": None, "integral_time": math.inf, "derivative_time": 0.0, "predict": True}
-    for name, value in given.items():
-        if value is not idle[name] and value != idle[name]:
-            raise ValueError(f"{name}={value!r} is for constant_speed=True; pass that too, or leave {name} out")
-
-
-def checked_speed(platform: Platform, speed: object) -> float | None:
-    if speed is None:
-        return None
-    asked = check_above_zero("speed", speed, "m/s", "give the constant speed, or leave it out for the fastest workable")
-    for name in ("speed_limit", "wheel_speed_limit"):
-        most = getattr(platform, name)
-        if asked > most:
-            raise ValueError(f"speed={shown(asked, 'm/s')} must be <= {name}={shown(rounded_down(most), 'm/s')}; ask for less")
-    return asked
-
-
-def check_window(platform: Platform, found: sizing.Window, speed: float, capture_radius: float) -> None:
-    """Refuse a speed at which no gain works, with the binding reason and the fastest speed at which one does."""
-    workable = shown(rounded_down(found.fastest), "m/s")
-    if speed * platform.period > sizing.CHORD * capture_radius * (1.0 + 1e-12):
-        raise ValueError(
-            f"capture_radius={shown(capture_radius, 'm')} must be >= speed * period / {sizing.CHORD:g} = "
-            f"{shown(rounded_up(speed * platform.period / sizing.CHORD), 'm')}, for a step must not pass over the disc; "
-            f"widen it, or drive at {workable} or less"
-        )
-    if speed > found.fastest * (1.0 + 1e-12):
-        raise ValueError(f"speed={shown(speed, 'm/s')}: no gain works, bound by {found.bound}; at {workable} or less one does")
-
-
-def checked_gain(
-    platform: Platform, found: sizing.Window, gain: object, integral_time: object, derivative_time: object, predict: bool
-) -> float:
-    chosen = sizing.chosen_gain(platform, found)
-    if gain is not None:
-        chosen = check_above_zero("gain", gain, "1/s", "give turn rate per heading error, or leave it out")
-        if not found.low * (1.0 - PRINTED) <= chosen <= found.high * (1.0 + PRINTED):
-            what = "circles the goal" if chosen < found.low else "swings"
-            working = f"{found.low:.4g} to {found.high:.4g} 1/s"
-            raise ValueError(f"gain={shown(chosen, '1/s')} {what}; give {working}, or leave it out")
-    if not (isinstance(integral_time, (float, np.floating)) and integral_time == math.inf):
-        check_above_zero("integral_time", integral_time, "s", "give the time in which the integral repeats the error; inf for none")
-    check_not_negative("derivative_time", derivative_time, "s", "give the time by which the derivative looks ahead; 0 for none")
-    delay = () if predict else (platform.dead_time, platform.motor_lag)
-    size = sizing.slowest_root(chosen, float(integral_time), float(derivative_time), platform.period, *delay)  # type: ignore[arg-type]
-    if size >= 1.0:
-        raise ValueError(
-            f"gain={shown(chosen, '1/s')} with integral_time={shown(integral_time, 's')} and "
-            f"derivative_time={shown(derivative_time, 's')} swings for ever; lengthen the first or shorten the second"
-        )
-    return chosen
-
-
-def checked_age(platform: Platform, stale_after: object) -> float:
-    if stale_after is None:
-        return platform.dead_time + 3.0 * platform.period
-    age = check_above_zero("stale_after", stale_after, "s", "give the age at which a pose is too old")
-    if age < platform.period:
-        raise ValueError(
-            f"stale_after={shown(age, 's')} must be >= period={shown(rounded_up(platform.period), 's')}; a fresh pose must count"
-        )
-    if age > 20.0:
-        raise ValueError(f"stale_after={shown(age, 's')} must be <= 20 s; a pose that old says nothing")
-    return age

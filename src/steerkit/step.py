@@ -4,14 +4,13 @@
     -> command
 
 One scalar core for the single step, the in-place door and plain Python. It checks data, never arguments, and raises on nothing:
-bad data becomes a stop within the limits and a cause. Settings, memory and measurement are rows of floats.
+bad data becomes a stop within the limits and a cause. Settings (`settings.py`), memory and measurement are rows of floats.
 """
 
 from __future__ import annotations
 
 import math
 from collections.abc import Sequence
-from typing import NamedTuple
 
 from steerkit.angles import difference_kernel
 from steerkit.answering import SILENT_PERIODS, watch_kernel
@@ -63,41 +62,6 @@ from steerkit.wheel_grid import on_grid_kernel, slowest_kernel
 
 REST = 0.01  # m/s: wheels slower than this are at rest
 PASSED, STOPPING = 3.0, 2.0  # progress toward a goal, beside those of `approach`
-
-
-class Settings(NamedTuple):
-    """What the step knows of robot and task; packed once into a row of floats. SI units."""
-
-    period: float
-    dead_time: float
-    motor_lag: float
-    top_speed: float
-    reverse_speed: float
-    top_turn_rate: float
-    wheel_speed: float
-    half_track: float
-    acceleration: float
-    braking: float
-    turn_acceleration: float
-    position_noise: float
-    heading_noise: float
-    capture_radius: float
-    stay_radius: float
-    stop_radius: float
-    aim_radius: float
-    cruise: float
-    ceiling: float
-    gain: float
-    integral_time: float
-    derivative_time: float
-    predict: float
-    stale_after: float
-    rest_radius: float
-    scheduled: float
-    settling: float
-    smallest_wheel_speed: float
-    wheel_speed_step: float
-    most_raised: float
 
 
 RESULT = 18  # left, right, speed, turn rate, phase, causes, error, distance, pose, age, goal, wanted, slowed by, slowest wheel
