@@ -47,7 +47,8 @@ class Outcome(NamedTuple):
     sign_changes: float  # of the turn rate sent
     raised: float  # smallest wheel speed in use at the end, m/s
     distance: float  # at the end, m
-    starts: float  # times it began to drive again after rest
+    starts: float  # steps that drove on after ARRIVED
+    tries: float  # times it drove on from rest in the disc before it had told ARRIVED
     steps: float
 
 
@@ -117,11 +118,11 @@ def rough_kernel(settings, memory, truth, start, motion, goals, spans, noise, mo
     zero_from = 0.0  # since when the wheels have been told to stand
     acting, aim, now, nan = 0, 0, 0.0, math.nan
     rest, stopped, left, excess, stalls, changes, starts, last_sign, rested = -1.0, -1.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0, -1
-    slowest, distance, made, moved = settings[27], 0.0, 0, True
+    slowest, distance, made, moved, settled, tries = settings[27], 0.0, 0, True, False, 0.0
     for k in range(steps):
         if aim + 1 < len(goals) and k >= goals[aim + 1, 0]:
             aim += 1
-            rest, stopped, rested = -1.0, -1.0, -1
+            rest, stopped, rested, settled = -1.0, -1.0, -1, False
         goal_x, goal_y = goals[aim, 1], goals[aim, 2]
         x, y, heading = state[0] + noise[k, 0], state[1] + noise[k, 1], state[2] + noise[k, 2]
         seen_v, seen_w = (state[3], state[4]) if measured_motion else (nan, nan)
@@ -167,12 +168,13 @@ def rough_kernel(settings, memory, truth, start, motion, goals, spans, noise, mo
         moves = v != 0.0 or w != 0.0
         if rest >= 0.0:
             left = max(left, distance - radius)
-            starts += moves and not moved
-        moved = moves
+            tries += moves and not moved
+        starts += moves and settled
+        moved, settled = moves, settled or r[4] == 1.0
         made = k + 1
         if rest >= 0.0 and aim == len(goals) - 1 and k >= rested + more:
             break
-    return rest, stopped, left, excess, stalls, changes, slowest, distance, starts, float(made)
+    return rest, stopped, left, excess, stalls, changes, slowest, distance, starts, tries, float(made)
 
 
 COLUMNS = (

@@ -1,4 +1,4 @@
-"""Studies of the speed schedule over random robots: few draws in the tests, many with `python tests/schedule_studies.py --runs 100000`.
+"""Studies of the speed schedule over random robots: few draws in the tests, many with `python tests/schedule_studies.py --runs N`.
 
 A run is a robot and a start. Its time is judged against `travel_time`, a rigorous lower bound without lag, dead band or resolution:
 time from the instant at which the first command takes effect to rest, over the bound from the state at that instant.
@@ -11,6 +11,8 @@ import dataclasses
 import math
 import sys
 import time
+from collections.abc import Callable
+from itertools import pairwise
 from typing import NamedTuple
 
 import numpy as np
@@ -118,6 +120,7 @@ class Row(NamedTuple):
     excess: float
     stalls: float
     starts: float
+    tries: float
     raised: float
 
 
@@ -127,7 +130,7 @@ def drive_one(run: Run, truth: Truth, rng, noise=(0.0, 0.0), jitter=0.0, goals=(
     bound, distance = bound_of(run)
     loose, _ = bound_of(run, tight=False)
     controller = Controller(p, capture_radius=run.capture_radius)
-    far = sum(math.dist(a[1:], b[1:]) for a, b in zip(goals, goals[1:], strict=False))
+    far = sum(math.dist(a[1:], b[1:]) for a, b in pairwise(goals))
     span = 10.0 * (bound + far / p.top_speed + 2.0 * len(goals) - 2.0) + 5.0 + goals[-1][0] * p.period + p.dead_time + p.motor_lag
     steps = math.ceil(span / p.period / (1.0 - jitter)) + MORE
     got, _log = rough_drive(
@@ -155,6 +158,7 @@ def drive_one(run: Run, truth: Truth, rng, noise=(0.0, 0.0), jitter=0.0, goals=(
             got.excess,
             got.stalls,
             got.starts,
+            got.tries,
             got.raised / told if told else 0.0,
         ),
     )
@@ -185,11 +189,20 @@ def spread(ratios: np.ndarray) -> str:
 
 def report(rows: np.ndarray, by_lag: bool = False) -> str:
     r = Row(*rows.T)
+    counts = {
+        "not at rest": r.arrived == 0,
+        "left after rest": r.left > 0,
+        "drove on after ARRIVED": r.starts > 0,
+        "stopped twice": r.tries > 0,
+        "outside limits": r.excess > 1e-9,
+        "told less than the smallest wheel speed": r.stalls > 0,
+        "smallest wheel speed raised": r.raised > 1.01,
+    }
+    changes = 60.0 * r.sign_changes
     lines = [
-        f"runs {len(rows)}: not at rest {int(np.sum(r.arrived == 0))}, left after rest {int(np.sum(r.left > 0))} "
-        f"(farthest {np.max(r.left):.4f} m), outside limits {int(np.sum(r.excess > 1e-9))}, told less than the smallest wheel speed "
-        f"{int(np.sum(r.stalls > 0))}, began again after rest {int(np.sum(r.starts > 0))}; "
-        f"turn-rate sign changes per minute: mean {60 * np.mean(r.sign_changes):.1f}, 95 % {60 * np.percentile(r.sign_changes, 95):.1f}"
+        f"  runs {len(rows)}; " + ", ".join(f"{name} {int(np.sum(which))}" for name, which in counts.items()),
+        f"  farthest outside after rest {np.max(r.left / r.radius):.3f} r; turn-rate sign changes a minute: "
+        f"mean {np.mean(changes):.1f}, 95 % {np.percentile(changes, 95):.1f}",
     ]
     with np.errstate(divide="ignore", invalid="ignore"):
         tight = np.where((r.bound > 0) & (r.arrived > 0), r.time / r.bound, np.nan)
@@ -208,3 +221,108 @@ def report(rows: np.ndarray, by_lag: bool = False) -> str:
             which = (r.from_rest > 0) & outside & (r.lag > low) & (r.lag <= high)
             lines.append(f"  lag {max(low, 0):g} to {high:g} s, from rest, d > 1.5 r: {spread(loose[which])}")
     return "\n".join(lines)
+
+
+def changing(rng, run: Run):
+    """Return goals, rows (step, x, y), that change three times on the way, wherever the robot is then."""
+    period = run.platform.period
+    rows = [(0, 0.0, 0.0)]
+    for _ in range(3):
+        rows.append((rows[-1][0] + 1 + int(rng.uniform(0.0, 3.0) / period), *rng.uniform(-3.0, 3.0, 2)))
+    return rows
+
+
+WRONG = {  # what may be declared wrong, and the number of the truth that it scales
+    "dead_time": "dead_time",
+    "motor_lag": "motor_lag",
+    "smallest wheel speed": "smallest",
+    "wheel radius (speed)": "speed_scale",
+    "track width (turn)": "turn_scale",
+    "acceleration": "acceleration",
+    "braking": "braking",
+    "turn_acceleration": "turn_acceleration",
+    "speed limits": "top_speed",
+    "turn-rate limits": "top_turn_rate",
+}
+
+
+def wrong(rng, names=tuple(WRONG), scale: float | None = None) -> tuple[Run, Truth]:
+    """Return a run, lag, dead band and resolution drawn, and a truth `scale` times what is declared (None: 0.8 or 1.2 each)."""
+    run = common_draw(rng, 1.0 if rng.random() < 0.22 else 10.0, True, True)
+    p = run.platform
+    true = true_of(p)._asdict()
+    declared = true | {"speed_scale": 1.0, "turn_scale": 1.0, "top_speed": p.top_speed, "top_turn_rate": p.top_turn_rate}
+    declared |= {name: getattr(p, name) for name in ("acceleration", "braking", "turn_acceleration")}
+    for name in names:
+        true[WRONG[name]] = declared[WRONG[name]] * (scale or rng.choice([0.8, 1.2]))
+    return run, Truth(**true)
+
+
+def noisy(rng, share: float, heading: float) -> Run:
+    """Return a run whose position noise is a share of the capture radius, its heading noise `heading` (rad)."""
+    run = common_draw(rng, 1.0 if rng.random() < 0.22 else 10.0, True)
+    noise = share * run.capture_radius * (1.0 - 1e-9)
+    return run._replace(platform=dataclasses.replace(run.platform, position_noise=noise, heading_noise=heading))
+
+
+def noise_of(_rng, run: Run) -> tuple[float, float]:
+    return run.platform.position_noise, run.platform.heading_noise
+
+
+def show(name: str, rows: np.ndarray, by_lag: bool = False) -> None:
+    print(f"\r{name}\n{report(rows, by_lag)}\n", flush=True)
+
+
+def studies(n: int) -> dict[str, tuple[Callable[[str], np.ndarray], bool]]:
+    """Return name, study and whether it is told by lag."""
+    found = {
+        "goals 0-10 m": (lambda name: many(n, 1, lambda rng: common_draw(rng, 10.0), name), False),
+        "goals 0-1 m": (lambda name: many(n, 2, lambda rng: common_draw(rng, 1.0), name), False),
+        "spinning starts, goals 0-10 m": (lambda name: many(n, 3, lambda rng: common_draw(rng, 10.0, spin=1.0), name), False),
+        "spinning starts, goals 0-1 m": (lambda name: many(n, 4, lambda rng: common_draw(rng, 1.0, spin=1.0), name), False),
+        "lag": (lambda name: many(n, 5, lambda rng: mixed(rng, True, False), name), True),
+        "lag, dead band, resolution": (lambda name: many(n, 6, lambda rng: mixed(rng, True, True), name), True),
+        "committed robots without lag": (lambda name: many(n, 7, lambda rng: committed_draw(rng, 20.0, lag=False), name), False),
+        "committed robots": (lambda name: many(n, 8, lambda rng: committed_draw(rng, 20.0), name), True),
+        "changing goals": (lambda name: many(n, 9, lambda rng: common_draw(rng, 5.0, True, True), name, goals=changing), False),
+        "wrong: nothing": (lambda name: many(n, 10, lambda rng: wrong(rng, ()), name), False),
+        "wrong: jitter of a fifth": (lambda name: many(n, 10, lambda rng: wrong(rng, ()), name, jitter=0.2), False),
+    }
+    for what in WRONG:
+        for scale in (0.8, 1.2):
+            found[f"wrong: {what} is {scale} of declared"] = (
+                lambda name, what=what, scale=scale: many(n, 10, lambda rng: wrong(rng, (what,), scale), name),
+                False,
+            )
+    found["wrong: all by a fifth, and jitter"] = (lambda name: many(n, 11, wrong, name, jitter=0.2), False)
+    for share, degrees in ((0.0, 1.0), (0.05, 0.0), (0.05, 1.0), (0.125, 0.0), (0.125, 1.0)):
+        found[f"noise: {share:g} r, {degrees:g} deg"] = (
+            lambda name, share=share, degrees=degrees: many(
+                n, 12, lambda rng: noisy(rng, share, math.radians(degrees)), name, noise=noise_of
+            ),
+            False,
+        )
+    return found
+
+
+def main() -> None:
+    parser = argparse.ArgumentParser(description=__doc__)
+    parser.add_argument("--runs", type=int, default=2000)
+    parser.add_argument("--only", default="", help="part of a study's name")
+    parser.add_argument("--save", default="", help="write the rows of each study to this folder, as NumPy files")
+    chosen = parser.parse_args()
+    for name, (study, by_lag) in studies(chosen.runs).items():
+        if chosen.only in name:
+            rows = study(name)
+            show(name, rows, by_lag)
+            if chosen.save:
+                np.save(f"{chosen.save}/{name.replace(' ', '_').replace(',', '').replace(':', '').replace('/', '_')}.npy", rows)
+
+
+def mixed(rng, lag: bool, band: bool) -> Run:
+    """Return a run of which 30 % have a goal within 1 m."""
+    return common_draw(rng, 1.0 if rng.random() < 2.0 / 9.0 else 10.0, lag, band)
+
+
+if __name__ == "__main__":
+    main()

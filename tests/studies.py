@@ -165,7 +165,9 @@ def window_drives(robots: int, starts: int, seed: int) -> Drives:
                 speed = controller.speed * rng.uniform(0.3, 1.0)
                 found = sizing.window(robot.platform, robot.capture_radius, speed)
                 gain = found.low * (found.high / found.low) ** rng.random()
-                controller = Controller(robot.platform, capture_radius=robot.capture_radius, constant_speed=True, speed=speed, gain=gain)
+                controller = Controller(
+                    robot.platform, capture_radius=robot.capture_radius, constant_speed=True, speed=speed, gain=gain
+                )
         except ValueError:
             refused += 1
             continue

@@ -62,6 +62,7 @@ CARRIAGE = Platform(
 FOLLOW_RADIUS = 20.0  # m
 SPACING = 25.0  # m of path from waypoint to waypoint
 WAYPOINT_RADIUS = 5.0  # m, a fifth of that; the fastest workable speed is then 5 * 1 / 1.1 = 4.55 m/s
+NO_GOAL, EXACT = (math.nan, math.nan), (0.0, 0.0, 0.0)
 AWAY = (0.0, 0.0, -math.pi / 2.0)  # at the first fix, and the rider leaves north
 
 BAD = Causes.BAD_POSE | Causes.STALE_POSE | Causes.POSE_JUMPED | Causes.BAD_GOAL | Causes.BAD_FIELD | Causes.BAD_MEMORY
@@ -139,10 +140,18 @@ class Drive:
         self.memory = controller.start(time)
         self.steps: list[tuple[float, ...]] = []
 
-    def step(self, time: float, goal: tuple[float, float], row: int) -> tuple[float, Phase]:
-        """Step, and drive for a period; return how near the goal came (m), and the phase."""
+    def step(
+        self,
+        time: float,
+        goal: tuple[float, float],
+        row: int,
+        next_goal: tuple[float, float] = NO_GOAL,
+        noise: tuple[float, float, float] = EXACT,
+    ) -> tuple[float, Phase]:
+        """Step, and drive for a period; return how near the goal came (m), and the phase. The pose is seen off by `noise`."""
         state = self.robot.state
-        decision = self.controller.step(self.memory, Measurement(time, state[:3], goal))
+        seen = (state[0] + noise[0], state[1] + noise[1], state[2] + noise[2])
+        decision = self.controller.step(self.memory, Measurement(time, seen, goal, next_goal=next_goal))
         self.memory, c, r = decision.memory, decision.command, decision.report
         acting, nearest = self.robot.hold((c.speed, c.turn_rate), goal)
         told = (decision.phase, decision.causes, r.heading_error, r.distance, *r.wanted)

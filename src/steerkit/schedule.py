@@ -111,7 +111,7 @@ def schedule_kernel(
     aim = target_radius * (AIM + (AIM_NEAR - AIM) * near)
     if distance > 0.0:
         aim = min(aim, target_radius * GROWTH * peak / (turn * distance))
-    if distance <= aim:
+    if distance <= max(aim, TINY):
         return 0.0, 0.0, BRAKING
     size = abs(error)
     off = size - math.asin(aim / distance)

@@ -275,7 +275,7 @@ def step_kernel(settings: Sequence[float], memory: Sequence[float], measured: Se
             error = difference_kernel(bearing, then_heading)
             turning_to = turning_on_kernel(error, last_w, 6.0 * (settings[12] + settings[11] / max(distance, capture_radius)))
             if went == STOPPING:
-                settled = 0.5 * (capture_radius + rest_radius)
+                settled = capture_radius
             next_away, next_bearing = bearing_kernel(goal_x, goal_y, next_x, next_y)
             wanted_v, wanted_w, why, stopping = scheduled_kernel(
                 settings,
