@@ -1,10 +1,10 @@
 """Answering: whether the robot moves when it is told to.
 
 Wheels told to run below their smallest speed stand still, and a smallest speed that was declared too low leaves the robot standing.
-From the pose at which the wheels were last seen to answer, the path that they should have run since is added up; where there is
-much of it and the pose has stayed within its noise, the smallest speed in use is raised by a tenth, and so on until the robot
-moves. A robot that stands for another reason (blocked, motors off) is told of in the same way; its speed is not raised beyond
-`most`. Metres, seconds, radians. Derived; the numbers of periods and the tenth were chosen.
+From the pose at which the wheels were last seen to answer, the path and the turn that the robot should have made since are added
+up; where there is much of them and the pose has stayed within its noise, the smallest speed in use is raised by a tenth, and so on
+until the robot moves. A robot that stands for another reason (blocked, motors off) is told of in the same way; its smallest speed
+is not raised beyond `most`. Metres, seconds, radians. Derived; the number of periods and the tenth were chosen.
 """
 
 from __future__ import annotations
@@ -14,7 +14,7 @@ from collections.abc import Sequence
 
 from steerkit.angles import difference_kernel
 from steerkit.compiled import kernel
-from steerkit.memory_row import SILENT, SLOWEST, WATCH_HEADING, WATCH_PATH, WATCH_TIME, WATCH_X, WATCH_Y
+from steerkit.memory_row import SILENT, SLOWEST, WATCH_HEADING, WATCH_PATH, WATCH_TIME, WATCH_TURN, WATCH_X, WATCH_Y
 
 SILENT_PERIODS = 7.0  # without an answer, besides half of dead time and lag
 RAISE = 1.1
@@ -32,7 +32,8 @@ def watch_kernel(
     x: float,
     y: float,
     heading: float,
-    told: float,
+    v: float,
+    w: float,
     since: float,
     blur: float,
     half_track: float,
@@ -42,25 +43,26 @@ def watch_kernel(
 ) -> bool:
     """Write the watch to the memory, the smallest speed raised where it is due; say whether the robot does not answer.
 
-    `told`: the faster wheel's speed that the model expects at the pose; `blur`: noise of a pose as a path of the wheels (m).
+    (v, w): the motion that the model expects at the pose; `blur`: noise of a pose as a path of the wheels (m).
     """
     slowest, silent = memory[SLOWEST], memory[SILENT]
-    path, time = memory[WATCH_PATH], memory[WATCH_TIME]
+    path, turn, time = memory[WATCH_PATH], memory[WATCH_TURN], memory[WATCH_TIME]
     at_x, at_y, at_heading = memory[WATCH_X], memory[WATCH_Y], memory[WATCH_HEADING]
     if posed and at_x != at_x:
         at_x, at_y, at_heading = x, y, heading
     if posed:
         dx, dy = x - at_x, y - at_y
         seen = math.sqrt(dx * dx + dy * dy) + abs(difference_kernel(heading, at_heading)) * half_track
+        told = abs(v) + abs(w) * half_track
         if told > LEAST * max(slowest, FIRST * top):
-            path += told * since
-            time += since
-        if seen > max(BLUR * blur, SEEN * path):
-            at_x, at_y, at_heading, path, time, silent = x, y, heading, 0.0, 0.0, 0.0
-        elif time > patience and path > max(2.0 * BLUR * blur, 0.5 * patience * slowest):
-            path, time, silent = 0.0, 0.0, 1.0
+            path, turn, time = path + v * since, turn + w * since, time + since
+        due = abs(path) + abs(turn) * half_track
+        if seen > max(BLUR * blur, SEEN * due):
+            at_x, at_y, at_heading, path, turn, time, silent = x, y, heading, 0.0, 0.0, 0.0, 0.0
+        elif time > patience and due > max(2.0 * BLUR * blur, 0.5 * patience * slowest):
+            path, turn, time, silent = 0.0, 0.0, 0.0, 1.0
             if told <= 2.0 * slowest or slowest == 0.0:
                 slowest = min(max(RAISE * slowest, FIRST * top), max(most, slowest))
-    out[SLOWEST], out[SILENT], out[WATCH_PATH], out[WATCH_TIME] = slowest, silent, path, time
+    out[SLOWEST], out[SILENT], out[WATCH_PATH], out[WATCH_TURN], out[WATCH_TIME] = slowest, silent, path, turn, time
     out[WATCH_X], out[WATCH_Y], out[WATCH_HEADING] = at_x, at_y, at_heading
     return silent != 0.0

@@ -17,12 +17,12 @@ FAST = 1e4  # m/s, rad/s: nor is a motion beyond this
 
 TIME, SPEED, TURN_RATE, X, Y, HEADING, POSE_AGE, BASE_AGE, BASE_SPEED, BASE_TURN_RATE = range(10)
 GOAL_X, GOAL_Y, INTEGRAL, HEADING_BEFORE, PROGRESS, PHASE, GOAL_LOCAL, STAYS = range(10, 18)
-RAMP_SPEED, RAMP_TURN_RATE, SLOWEST, WATCH_X, WATCH_Y, WATCH_HEADING, WATCH_PATH, WATCH_TIME, SILENT = range(18, HEAD)
+RAMP_SPEED, RAMP_TURN_RATE, SLOWEST, WATCH_X, WATCH_Y, WATCH_HEADING, WATCH_PATH, WATCH_TURN, WATCH_TIME, SILENT = range(18, HEAD)
 # SPEED, TURN_RATE: the last command as sent. RAMP: the same before it was put on the grid of wheel speeds.
 # BASE is the motion of the wheels, as modelled, BASE_AGE before the last step: no pose in use is older.
 # STAYS: arrived, and to stand still until the goal or the robot is moved.
-# SLOWEST: the smallest wheel speed in use. WATCH: a pose, and the path and time of the wheels since, without an answer; SILENT:
-# it was noticed.
+# SLOWEST: the smallest wheel speed in use. WATCH: a pose, and the path, turn and time commanded since, without an answer;
+# SILENT: it was noticed.
 
 
 @kernel
@@ -42,7 +42,8 @@ def sound_kernel(memory: Sequence[float], rows: int) -> bool:
     base = usable_kernel(memory[BASE_SPEED], FAST) and usable_kernel(memory[BASE_TURN_RATE], FAST)
     ages = memory[POSE_AGE] >= 0.0 and 0.0 <= memory[BASE_AGE] <= FAR
     ramp = usable_kernel(memory[RAMP_SPEED], FAST) and usable_kernel(memory[RAMP_TURN_RATE], FAST)
-    watch = 0.0 <= memory[SLOWEST] <= FAST and 0.0 <= memory[WATCH_PATH] <= FAR and 0.0 <= memory[WATCH_TIME] <= FAR
+    watch = 0.0 <= memory[SLOWEST] <= FAST and usable_kernel(memory[WATCH_PATH], FAR) and usable_kernel(memory[WATCH_TURN], FAR)
+    watch = watch and 0.0 <= memory[WATCH_TIME] <= FAR
     return posed and ramp and watch and motion and base and ages and usable_kernel(memory[INTEGRAL], FAR)
 
 

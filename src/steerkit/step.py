@@ -206,7 +206,7 @@ def step_kernel(settings: Sequence[float], memory: Sequence[float], measured: Se
         memory[BASE_SPEED],
         memory[BASE_TURN_RATE],
     )
-    told = abs(v) + abs(w) * half_track
+    told_v, told_w = v, w
     v = seen_v if seen_v == seen_v else v
     w = seen_w if seen_w == seen_w else w
     jumped = False
@@ -217,7 +217,7 @@ def step_kernel(settings: Sequence[float], memory: Sequence[float], measured: Se
     blur = settings[11] + settings[12] * half_track
     patience = SILENT_PERIODS * period + 0.5 * (dead_time + lag)
     posed = pose_trouble == 0 and not local
-    if watch_kernel(memory, out, posed, x, y, heading, told, since, blur, half_track, patience, top, settings[29]):
+    if watch_kernel(memory, out, posed, x, y, heading, told_v, told_w, since, blur, half_track, patience, top, settings[29]):
         causes |= NO_ANSWER
     slowest = slowest_kernel(out[SLOWEST], settings[28])
     goal_x, goal_y, aimed, new_goal, moved = goal_kernel(memory, measured, x, y, heading, local, capture_radius)
