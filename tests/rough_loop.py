@@ -1,4 +1,4 @@
-"""A rough closed loop for tests only: the compiled step against wheels with dead time, lag, a dead band, ramps and scales of their own.
+"""A rough closed loop for tests only: the compiled step against wheels with dead time, lag, dead band and ramps of their own.
 
 Noise of the pose and jitter of the periods come in as arrays, so that everything is a function of its seeds. Exact in time but for
 ramps of the robot's own, which are followed in short steps.
@@ -107,7 +107,7 @@ def excess_kernel(s, v0, w0, v, w, slack):
 @kernel
 def rough_kernel(settings, memory, truth, start, motion, goals, spans, noise, more, measured_motion, log):
     """Drive through `goals`, rows (step from which it holds, x, y); end `more` steps after rest within the last one's disc."""
-    period, half_track, radius, dead_time = settings[0], settings[7], settings[13], truth[0]
+    half_track, radius, dead_time = settings[7], settings[13], truth[0]
     slack = 0.0
     if settings[27] > 0.0 or settings[28] > 0.0:
         slack = 3.0 * max(settings[27], settings[28]) + 2.0 * settings[28]

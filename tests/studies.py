@@ -44,6 +44,7 @@ def heading_errors(platform, gain, duration, predict, ceiling=FREE, e0=1.0, moto
         turn_acceleration=FREE,
         wheel_speed=FREE,
         cruise=1e-9,
+        most_raised=0.0,
         predict=float(predict),
     )
     steps = math.ceil(duration / platform.period) + 1
@@ -334,22 +335,27 @@ def limit_storm(steps: int, seed: int) -> Storm:
             before = others if Causes.APPLIED_BY_OTHERS in decision.causes else memory.command
             since = told - memory.time
             early = since / p.period if 0.0 < since < p.period else 1.0  # an early step may change as much less
-            worst = max(worst, excess(controller, before, decision.command, measurement, early))
+            worst = max(worst, excess(controller, before, decision, measurement, early))
             causes.update(one.name for one in Causes if one in decision.causes and one.name)
             memory = decision.memory
             made += 1
     return Storm(made, worst, causes)
 
 
-def excess(controller: Controller, before, command, measurement, early: float) -> float:
-    """Return by how much, relative, a command breaks a limit that it could have kept."""
-    p = controller.platform
+def excess(controller: Controller, before, decision, measurement, early: float) -> float:
+    """Return by how much, relative, a command breaks a limit that it could have kept.
+
+    Wheels of which the robot does not answer to small speeds leave their ramps by up to the smallest speed, before and after.
+    """
+    p, command = controller.platform, decision.command
+    jump = 2.0 * decision.report.slowest
     v0, w0 = before
     v, w = command.speed, command.turn_rate
     half = p.track_width / 2.0
     a, b, al = (rate * p.period * early for rate in (p.acceleration, p.braking, p.turn_acceleration))
     top = min(p.top_speed, max(0.0, measurement.speed_limit)) if measurement.speed_limit == measurement.speed_limit else p.top_speed
-    slowest, least_turn = max(0.0, abs(v0) - b), max(0.0, abs(w0) - al)
+    slowest, least_turn = max(0.0, abs(v0) - b) + jump, max(0.0, abs(w0) - al) + jump / half
+    a, b, al = a + jump, b + jump, al + jump / half
     grown = abs(v) - abs(v0) if v * v0 >= 0.0 else abs(v)
     shrunk = abs(v0) - abs(v) if v * v0 >= 0.0 else abs(v0)
     return max(

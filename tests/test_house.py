@@ -16,7 +16,7 @@ from pathlib import Path
 import pytest
 
 import steerkit
-from steerkit import Causes, Controller, Phase, compiled
+from steerkit import Causes, Controller, Phase, Slowing, compiled
 
 ROOT = Path(__file__).parent.parent
 PACKAGE = ROOT / "src" / "steerkit"
@@ -94,7 +94,10 @@ def test_every_public_name_is_documented_each_parameter_with_its_unit(module):
 
 @pytest.mark.parametrize("module", MODULES, ids=lambda module: module.__name__.split(".")[1])
 def test_modules_with_doors_say_which(module):
-    inner = ("checks", "compiled", "reading", "prediction", "approach", "step")
+    inner = (
+        *("checks", "compiled", "reading", "way_ahead", "step_fit", "gain_reasons", "prediction", "approach", "schedule"),
+        *("wheel_grid", "settings", "memory_row", "intake", "answering", "step"),
+    )
     assert hasattr(module, "__all__") != (module.__name__.split(".")[1] in inner)
 
 
@@ -135,7 +138,7 @@ def test_the_readme_s_print_is_what_is_printed():
 
 
 def test_every_phase_and_cause_has_its_row_in_the_readme():
-    for one in [*Phase, *Causes]:
+    for one in [*Phase, *Causes, *Slowing]:
         assert re.search(rf"^\|.*\b{one.name}\b.*\|", README, re.M), one
 
 

@@ -34,7 +34,7 @@ import numpy as np
 import pytest
 
 from closed_loop import plant_kernel
-from steerkit import Causes, Controller, Measurement, Phase, Platform, angles
+from steerkit import Causes, Controller, Measurement, Phase, Platform, Slowing, angles
 
 RIDE = Path(__file__).parent / "data" / "ride.csv"
 BAND = 1e-5  # rad; the simulated robot moves in arcs of lag/20, the prediction by quadrature: 1e-6 rad apart at most, measured
@@ -109,6 +109,7 @@ class Log(NamedTuple):
     distance: np.ndarray
     wanted_speed: np.ndarray
     wanted_turn_rate: np.ndarray
+    slowed_by: np.ndarray
 
 
 class Robot:
@@ -154,7 +155,7 @@ class Drive:
         decision = self.controller.step(self.memory, Measurement(time, seen, goal, next_goal=next_goal))
         self.memory, c, r = decision.memory, decision.command, decision.report
         acting, nearest = self.robot.hold((c.speed, c.turn_rate), goal)
-        told = (decision.phase, decision.causes, r.heading_error, r.distance, *r.wanted)
+        told = (decision.phase, decision.causes, r.heading_error, r.distance, *r.wanted, r.slowed_by)
         self.steps.append((time, row, *state, *acting, nearest, *goal, *c, *told))
         return nearest, decision.phase
 
@@ -238,10 +239,10 @@ def remainder(angle: np.ndarray) -> np.ndarray:
     return np.array([math.remainder(one, 2.0 * math.pi) for one in angle.tolist()])
 
 
-def error_where_it_acts(log: Log, platform: Platform) -> np.ndarray:
-    """Return the short-way error (rad) at the true pose from which each step's command acts; NaN for the last few steps.
+def goal_where_it_acts(log: Log, platform: Platform) -> tuple[np.ndarray, np.ndarray]:
+    """Return distance (m) and short-way error (rad) of the goal at the true pose from which each step's command acts.
 
-    Rolled out by the lag at the motion of then: an arc, by its chord.
+    Rolled out by the lag at the motion of then: an arc, by its chord. NaN for the last few steps.
     """
     late = periods_of_dead_time(platform)
     steps = len(log.time) - late
@@ -249,9 +250,15 @@ def error_where_it_acts(log: Log, platform: Platform) -> np.ndarray:
     half = 0.5 * w * platform.motor_lag
     chord = v * platform.motor_lag * np.sinc(half / np.pi)
     x, y = x + chord * np.cos(heading + half), y + chord * np.sin(heading + half)
-    error = np.full(len(log.time), np.nan)
-    error[:steps] = remainder(np.arctan2(log.goal_y[:steps] - y, log.goal_x[:steps] - x) - heading - 2.0 * half)
-    return error
+    distance, error = np.full((2, len(log.time)), np.nan)
+    dx, dy = log.goal_x[:steps] - x, log.goal_y[:steps] - y
+    distance[:steps] = np.hypot(dx, dy)
+    error[:steps] = remainder(np.arctan2(dy, dx) - heading - 2.0 * half)
+    return distance, error
+
+
+def error_where_it_acts(log: Log, platform: Platform) -> np.ndarray:
+    return goal_where_it_acts(log, platform)[1]
 
 
 def error_now(log: Log) -> np.ndarray:
@@ -260,7 +267,7 @@ def error_now(log: Log) -> np.ndarray:
 
 
 def driving(log: Log) -> np.ndarray:
-    return (log.phase == Phase.DRIVING) & (log.wanted_speed > 0.0)
+    return (log.phase == Phase.DRIVING) & ((log.wanted_speed > 0.0) | (log.wanted_turn_rate != 0.0))
 
 
 def clear(error: np.ndarray) -> np.ndarray:
@@ -290,12 +297,16 @@ def fixes_at_rest(log: Log, platform: Platform) -> np.ndarray:
     return new_goals(log) & driving(log) & not_turning(log, platform) & clear(error_now(log))
 
 
-def long_way_round(log: Log, platform: Platform) -> np.ndarray:
-    """Return the steps that turn the long way round: see the head of this file."""
-    error = error_where_it_acts(log, platform)
-    judged = driving(log) & clear(error)
-    wrong = judged & (np.sign(log.wanted_turn_rate) != np.sign(error))
-    at_rest = fixes_at_rest(log, platform) & (np.sign(log.wanted_turn_rate) != np.sign(error_now(log)))
+def long_way_round(log: Log, platform: Platform, disc: float = 0.0) -> np.ndarray:
+    """Return the steps that turn the long way round, or not at all: see the head of this file.
+
+    Not to turn is right where the heading meets a disc of radius `disc` (m) about the goal.
+    """
+    distance, error = goal_where_it_acts(log, platform)
+    ahead = (np.abs(error) < math.pi / 2.0) & (distance * np.abs(np.sin(error)) <= disc)
+    judged = driving(log) & ~(ahead & (log.wanted_turn_rate == 0.0))
+    wrong = judged & clear(error) & (np.sign(log.wanted_turn_rate) != np.sign(error))
+    at_rest = judged & fixes_at_rest(log, platform) & (np.sign(log.wanted_turn_rate) != np.sign(error_now(log)))
     return np.flatnonzero(wrong | at_rest)
 
 
@@ -368,6 +379,11 @@ class Driven(NamedTuple):
     def platform(self) -> Platform:
         return self.controller.platform
 
+    @property
+    def disc(self) -> float:
+        """Radius of the disc that the schedule drives into without a turn; 0 at constant speed, m."""
+        return 0.0 if self.controller.window else self.controller.settings.aim_radius
+
 
 MADE: dict[str, Callable[[], Driven]] = {
     "every fix": lambda: Driven(follower(), follow(follower()), True),
@@ -403,19 +419,20 @@ def figures(one: Driven) -> dict[str, str]:
         "... turning not yet": f"{fixes_at_rest(log, one.platform).sum()}",
         "... error too small to judge": f"{(new & straight_ahead(log, error)).sum()}",
         "... largest error, deg": f"{np.degrees(np.nanmax(np.abs(error[new & drives]))):.1f}",
-        "steps the long way round": f"{len(long_way_round(log, one.platform))}",
+        "steps the long way round": f"{len(long_way_round(log, one.platform, one.disc))}",
         "commands beyond a limit": f"{sum(broken_limits(log, one.platform).values())}",
     }
     for name, value in zip(("mean", "median", "95 %", "most"), [behind.mean(), *np.percentile(behind, [50, 95, 100])], strict=True):
         found[f"behind the rider, {name}, m"] = f"{value:.1f}" if one.rider else "-"
     found |= {f"phase {name}, %": f"{100.0 * share:.2f}" for name, share in told.phases.items()}
+    found |= {f"slowed by {one.name}, %": f"{100.0 * np.mean(log.slowed_by == one):.2f}" for one in Slowing}
     found |= {f"cause {name}, %": f"{100.0 * share:.2f}" for name, share in told.causes.items()}
     return found | {"no cause, %": f"{100.0 * told.no_cause:.2f}"}
 
 
-def table() -> str:
-    """Return the figures of all drives, a column each; causes that never came stand together in the last line."""
-    columns = {name: figures(driven(name)) for name in MADE}
+def table(drives: dict[str, Driven] | None = None) -> str:
+    """Return the figures of drives (all here), a column each; causes that never came stand together in the last line."""
+    columns = {name: figures(one) for name, one in (drives or {name: driven(name) for name in MADE}).items()}
     names = list(next(iter(columns.values())))
     never = [name for name in names if name.startswith("cause") and all(column[name] == "0.00" for column in columns.values())]
     lines = [f"{'':<32}" + "".join(f"{name:>17}" for name in columns)]

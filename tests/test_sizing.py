@@ -2,17 +2,26 @@
 
 from __future__ import annotations
 
+import contextlib
+import io
 import math
+import re
+import sys
+from pathlib import Path
 
 import numpy as np
 import pytest
+from matplotlib.text import Annotation
 from scipy.special import lambertw
 
 from closed_loop import drive
-from steerkit import Controller, Platform, sizing
+from robots import cart, draw
+from sizing_studies import captures, changed, changes, constant_speed, settling
+from steerkit import Platform, compiled, sizing
 from steerkit.kinematics import arc
 from studies import gain_limits, heading_errors, linear_robot, orbit_errors
 
+SHARES = np.linspace(0.0, 1.0, 1000)
 FINE = 1e-3  # s, a period short enough to stand for continuous time
 
 
@@ -174,7 +183,7 @@ def test_orbit_radius_is_that_of_the_library_s_own_loop():
 
 # O1: omega = K wrap(e) ends in the circle 2V/(pi K): V = 1, K = 2: 0.318309886 (derived; Bendixson-Dulac).
 def test_constant_speed_orbit_is_the_derived_circle():
-    robot = Controller(linear_robot(FINE), capture_radius=0.2).unchecked(
+    robot = constant_speed(linear_robot(FINE), 0.2).unchecked(
         cruise=1.0,
         gain=2.0,
         ceiling=50.0,
@@ -245,3 +254,206 @@ def test_a_low_ceiling_allows_a_higher_gain_and_speed():
     assert found.ceiling == pytest.approx(math.sqrt(math.pi), rel=0.02)
     at_the_limit = sizing.no_ringing_gain(cart, found.fastest, cart.turn_rate_limit)
     assert found.high > 2.0 * at_the_limit
+
+
+# The report.
+
+REFUSED = {  # one for each number that binds: the robot, its demand, what must be among the changes
+    "turn_rate_limit": (cart(), (0.1, 0.5, True), {"speed", "capture_radius"}),
+    "turn_acceleration": (
+        cart(turn_acceleration=1.0, turn_rate_limit=6.0),
+        (0.2, 0.8, True),
+        {"speed", "capture_radius", "turn_acceleration"},
+    ),
+    "speed_limit": (cart(), (0.6, 1.0, True), {"speed", "speed_limit"}),
+    "period": (
+        cart(period=0.2, turn_acceleration=100.0, turn_rate_limit=12.0),
+        (0.1, 0.6, True),
+        {"speed", "capture_radius", "period"},
+    ),
+    "dead_time and motor_lag": (
+        cart(dead_time=0.3, motor_lag=0.08, turn_acceleration=20.0),
+        (0.2, 0.3, False),
+        {"speed", "capture_radius", "dead_time", "motor_lag", "predict"},
+    ),
+}
+
+
+@pytest.mark.parametrize("reason", REFUSED)
+def test_a_refused_demand_names_what_binds_and_the_changes_that_would_do(reason):
+    platform, demand, names = REFUSED[reason]
+    found = sizing.size(platform, *demand)
+    assert (found.works, found.reason, found.margins) == (False, reason, None)
+    assert math.isnan(found.gain)
+    assert math.isnan(found.overshoot)
+    assert {change.name for change in found.changes} >= names
+    assert f"NO GAIN WORKS at {demand[1]:g} m/s: bound by {reason}" in str(found)
+
+
+def test_a_proposed_change_is_the_nearest():
+    """A thousandth less of it is refused."""
+    for platform, demand, _ in REFUSED.values():
+        found = sizing.size(platform, *demand)
+        for change in found.changes:
+            if change.name == "predict":
+                continue
+            before = {"speed": found.speed, "capture_radius": found.capture_radius}.get(change.name) or getattr(
+                platform, change.name
+            )
+            nearer = change.value + math.copysign(2e-3 * change.value, before - change.value)
+            assert sizing.size(*changed(found, change)).works
+            assert not sizing.size(*changed(found, change._replace(value=nearer))).works, change
+
+
+def test_the_report_says_what_the_loop_does():
+    """The cart: predicted, so that e[k+1] = (1-g) e[k], g = K T: gain margin 2/g, Ms 2/(2-g), nothing overshoots (derived)."""
+    found = sizing.size(cart(), 0.1)
+    g = found.gain * 0.05
+    assert found.works
+    assert found.margins.gain_margin == pytest.approx(2.0 / g, rel=1e-9)
+    assert found.margins.sensitivity == pytest.approx(2.0 / (2.0 - g), rel=1e-6)
+    assert found.overshoot == 0.0
+    assert found.orbit_radius == pytest.approx(0.1 / 1.1, rel=1e-9)
+    periods = math.ceil(math.log(0.02) / math.log(1.0 - g))
+    assert found.settling_time == pytest.approx((periods + 2) * 0.05 + 0.0, abs=0.051)  # and dead time of 2.4 periods
+
+
+def test_a_large_error_settles_as_the_closed_form():
+    """t = (e0 - W/K)/W + ln((W/K)/(.02 e0))/K and the ramp's W/(2 al), within two periods (H1; derived)."""
+    robot = cart(period=0.005, dead_time=0.0, turn_acceleration=60.0, turn_rate_limit=1.0, wheel_speed_limit=10.0)
+    found = sizing.size(robot, 0.3, speed=0.1, gain=3.0)
+    K, W, e0 = 3.0, found.window.ceiling, math.pi
+    expected = (e0 - W / K) / W + math.log(W / K / (0.02 * e0)) / K + W / 120.0
+    assert found.longest_settling_time == pytest.approx(expected, abs=0.0125)
+
+
+def test_the_gain_of_a_noisy_robot_is_lower_and_the_report_says_why():
+    found = sizing.size(cart(heading_noise=0.05, speed_limit=0.5, turn_acceleration=20.0), 0.3)
+    assert found.gain == pytest.approx(0.1 * 2.0 / 0.05)
+    assert found.gain < 0.5 * found.window.high
+    assert any("heading noise of 2.86 deg" in sentence for sentence in found.why)
+
+
+@pytest.mark.parametrize(("gain", "fault", "near"), [(9.0, "swings", 4.444), (0.2, "circles the goal", 0.7003)])
+def test_a_gain_outside_the_window_is_told_with_the_nearest_inside(gain, fault, near):
+    found = sizing.size(cart(), 0.1, speed=0.1, gain=gain)
+    assert (found.works, found.reason) == (False, "gain")
+    assert found.changes == (sizing.Change("gain", near, "1/s"),)
+    assert sizing.size(cart(), 0.1, speed=0.1, gain=near).works
+    assert f"gain {gain:g} 1/s {fault}" in str(found)
+
+
+def test_motor_lag_costs_speed_without_prediction_and_none_with_it():
+    plain = cart(turn_acceleration=20.0, turn_rate_limit=4.0)
+    lagged = cart(turn_acceleration=20.0, turn_rate_limit=4.0, motor_lag=0.1)
+    assert sizing.size(lagged, 0.1).speed == sizing.size(plain, 0.1).speed
+    slower, faster = sizing.size(lagged, 0.1, predict=False), sizing.size(plain, 0.1, predict=False)
+    assert slower.speed < 0.9 * faster.speed
+    assert f"motor_lag 0.1 s costs {faster.speed - slower.speed:.3g} m/s" in slower.why[-1]
+
+
+@pytest.mark.parametrize("platform", [cart(), cart(dead_time=0.3, motor_lag=0.1), cart(heading_noise=0.05, position_noise=0.01)])
+@pytest.mark.parametrize("predict", [True, False])
+@pytest.mark.parametrize("speed", [None, 0.9])
+def test_the_printed_report_fits_a_screen_and_each_sentence_has_a_number_and_a_source(platform, predict, speed):
+    found = sizing.size(platform, 0.1, speed, predict)
+    lines = str(found).splitlines()
+    assert len(lines) <= 25
+    assert max(len(line) for line in lines) <= 120
+    for sentence in found.why:
+        assert any(letter.isdigit() for letter in sentence)
+        assert sentence.endswith(
+            ("(derived).", "(chosen).", "(measured).", "(derived; Erbe & Zhang 1989 for whole periods, from memory).")
+        )
+    assert "nan" not in str(found)
+
+
+def test_the_page_shows_what_is_printed():
+    page = (Path(__file__).parent.parent / "docs" / "sizing.md").read_text()
+    code, printed = re.findall(r"```python\n(.*?)```", page, re.S), re.findall(r"```text\n(.*?)```", page, re.S)
+    assert len(code) == len(printed) >= 3
+    names: dict[str, object] = {}
+    for block, expected in zip(code, printed, strict=True):
+        with contextlib.redirect_stdout(io.StringIO()) as out:
+            exec(compile(block, "sizing.md", "exec"), names)
+        assert out.getvalue() == expected
+
+
+@pytest.mark.parametrize("ending", ["png", "svg"])
+def test_the_picture_is_saved_without_a_display(tmp_path, ending):
+    for i, (platform, demand, _) in enumerate(REFUSED.values()):
+        for j, found in enumerate((sizing.size(platform, *demand), sizing.size(platform, demand[0], None, demand[2]))):
+            found.save_picture(tmp_path / f"{i}{j}.{ending}")
+            assert (tmp_path / f"{i}{j}.{ending}").stat().st_size > 10_000
+
+
+@pytest.fixture
+def drawn(monkeypatch):
+    """The figures that would have been saved."""
+    figures = []
+    monkeypatch.setattr("matplotlib.figure.Figure.savefig", lambda figure, path: figures.append(figure))
+    return figures
+
+
+def test_the_picture_names_its_edges(drawn):
+    for speed, words in ((None, "chosen: 4.44 1/s at 0.182 m/s"), (0.2, "asked: 0.2 m/s\nno gain works")):
+        sizing.size(cart(), 0.1, speed).save_picture("window.png")
+        got = {text.get_text() for text in drawn.pop().axes[0].texts}
+        edges = {"circles the goal below", "swings above", "fastest workable: 0.182 m/s\nbound by turn_rate_limit"}
+        assert got == {*edges, words}
+
+
+def test_no_words_of_a_picture_overlap_or_are_cut_off(drawn):
+    rng = np.random.default_rng(5)
+    robots = [draw(rng) for _ in range(30)]
+    demands = [(robot.platform, robot.capture_radius, speed) for robot in robots for speed in (None, robot.platform.top_speed)]
+    for i, demand in enumerate(demands):
+        sizing.size(*demand, predict=i % 4 < 2).save_picture("window.png")
+        figure = drawn.pop()
+        figure.draw_without_rendering()
+        axes = figure.axes[0]
+        boxes = [super(Annotation, text).get_window_extent() for text in axes.texts]
+        drawn_lines = [line.get_transform().transform(line.get_xydata()) for line in axes.lines if len(line.get_xydata()) > 1]
+        lines = np.concatenate(
+            [np.stack([np.interp(SHARES, np.linspace(0.0, 1.0, len(xy)), c) for c in xy.T], 1) for xy in drawn_lines]
+        )
+        for j, box in enumerate(boxes):
+            assert (
+                axes.texts[j].get_rotation() != 0.0 or "swings above" in axes.texts[j].get_text() or not box.count_contains(lines)
+            )
+            assert box.x0 >= 0.0
+            assert box.y0 >= 0.0
+            assert box.x1 <= figure.bbox.x1
+            assert box.y1 <= figure.bbox.y1
+            assert not any(box.padded(-1.0).overlaps(other) for other in boxes[:j]), (demand, j)
+
+
+def test_without_matplotlib_the_picture_says_what_to_install(monkeypatch, tmp_path):
+    monkeypatch.setitem(sys.modules, "matplotlib.figure", None)
+    with pytest.raises(ImportError, match=r"^the picture needs Matplotlib; install it with: pip install matplotlib$"):
+        sizing.size(cart(), 0.1).save_picture(tmp_path / "window.png")
+
+
+studied = pytest.mark.skipif(not compiled.ON, reason="closed loops over many robots want the compiler")
+
+
+@studied
+def test_the_chosen_gain_captures_every_start():
+    got = captures(robots=20, starts=20, seed=301)
+    assert (got.drives, got.missed) == (400, 0)
+
+
+@studied
+def test_the_library_s_own_loop_settles_as_predicted():
+    got = settling(robots=40, seed=302)
+    assert got.differ == 0
+    assert got.overshoot < 0.02
+
+
+@studied
+def test_every_proposed_change_works_when_sized_and_driven_again():
+    got = changes(robots=40, driven=4, seed=303)
+    assert got.refused > 20
+    assert set(got.proposed) >= {"speed", "capture_radius", "turn_rate_limit"}
+    assert got.drives > 50
+    assert (got.again, got.missed) == (0, 0)

@@ -16,7 +16,7 @@ from steerkit.angles import difference_kernel
 from steerkit.compiled import kernel
 from steerkit.memory_row import SILENT, SLOWEST, WATCH_HEADING, WATCH_PATH, WATCH_TIME, WATCH_TURN, WATCH_X, WATCH_Y
 
-SILENT_PERIODS = 7.0  # without an answer, besides half of dead time and lag
+SILENT_PERIODS = 7.0  # without an answer, besides dead time and lag
 RAISE = 1.1
 FIRST = 0.01  # of the top speed: the first smallest speed of a robot that declared none
 LEAST = 1e-3  # of the smallest speed; below it a lag dies away

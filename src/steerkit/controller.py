@@ -18,10 +18,10 @@ from steerkit.intake import BELIEVED, MEASURED
 from steerkit.memory_row import FAR, fresh_kernel
 from steerkit.platforms import Platform
 from steerkit.reading import PLAIN, SEVENTEEN, numbers
-from steerkit.settings import Settings, check_flags, check_scheduled, checked_radius, constant_settings, scheduled_settings
+from steerkit.settings import Settings, check_flags, check_scheduled, constant_settings, scheduled_settings
 from steerkit.signals import HEAD, Causes, Command, Decision, Measurement, Memory, Motion, Phase, Pose, Report, Slowing
-from steerkit.sizing import Window
 from steerkit.step import RESULT, in_place_kernel, step_kernel
+from steerkit.windows import Window, checked_radius
 
 __all__ = ["Controller", "InPlace"]
 
@@ -86,11 +86,10 @@ class Controller:
         predict: bool = True,
         stale_after: float | None = None,
     ) -> None:
-        if not isinstance(platform, Platform):
-            raise TypeError(f"platform={platform!r} must be a Platform; build one from the robot's measured numbers")
+        radius = checked_radius(platform, capture_radius)
         check_flags(constant_speed=constant_speed, predict=predict)
         self.platform = platform
-        self.capture_radius = checked_radius(platform, capture_radius)
+        self.capture_radius = radius
         self.window: Window | None = None
         law = {"speed": speed, "gain": gain, "integral_time": integral_time, "derivative_time": derivative_time, "predict": predict}
         if constant_speed:

@@ -10,12 +10,12 @@ from typing import NamedTuple
 
 import numpy as np
 
-from steerkit import sizing
+from steerkit import windows
 from steerkit.checks import check_above_zero, check_not_negative, rounded_down, rounded_up, shown
+from steerkit.gain_limits import slowest_root
 from steerkit.platforms import Platform
 
 PRINTED = 1e-3  # a gain that was read from a sentence, four digits, is one of the window
-NOISE_RADII = 8.0  # standard deviations of position that the capture radius must span
 STOP_DEPTH, AIM_DEPTH = 0.02, 0.05  # of the capture radius: how deep the schedule's stops end, and its braking
 FLAGS = {
     "constant_speed": "True drives at constant speed, False by the schedule",
@@ -79,13 +79,13 @@ def constant_settings(
     integral_time: object,
     derivative_time: object,
     predict: bool,
-) -> tuple[Settings, sizing.Window]:
+) -> tuple[Settings, windows.Window]:
     """Return the settings of a constant speed, and the window of gains there."""
-    window = sizing.window(platform, capture_radius, checked_speed(platform, speed), predict)
+    window = windows.window(platform, capture_radius, checked_speed(platform, speed), predict)
     cruise = window.fastest if speed is None else float(speed)  # type: ignore[arg-type]
     check_window(platform, window, cruise, capture_radius)
     chosen = checked_gain(platform, window, gain, integral_time, derivative_time, predict)
-    depth = sizing.stop_depth(capture_radius, platform.position_noise)
+    depth = windows.stop_depth(capture_radius, platform.position_noise)
     settings = common_settings(platform, capture_radius, stale_after)._replace(
         stop_radius=capture_radius * (1.0 - depth / 2.0),
         aim_radius=capture_radius * (1.0 - max(depth, 0.2)),
@@ -142,7 +142,7 @@ def most_raised(platform: Platform, capture_radius: float) -> float:
     """Return how far the smallest wheel speed may be raised where the robot does not answer (m/s): what works, within reason."""
     p = platform
     reason = max(3.0 * p.slowest_wheel_speed, 0.1 * p.top_speed)
-    return min(sizing.CHORD * capture_radius / p.period, p.top_turn_rate * p.track_width / 2.0, p.top_speed, reason)
+    return min(windows.CHORD * capture_radius / p.period, p.top_turn_rate * p.track_width / 2.0, p.top_speed, reason)
 
 
 def check_flags(**given: object) -> None:
@@ -151,32 +151,14 @@ def check_flags(**given: object) -> None:
             raise TypeError(f"{name}={flag!r} must be True or False; {FLAGS[name]}")
 
 
-def checked_radius(platform: Platform, capture_radius: object) -> float:
-    radius = check_above_zero("capture_radius", capture_radius, "m", "give the disc about the goal to come to rest in")
-    least = NOISE_RADII * platform.position_noise
-    if radius < least:
-        raise ValueError(
-            f"capture_radius={shown(radius, 'm')} must be >= {shown(rounded_up(least), 'm')}, eight standard deviations of "
-            "position_noise; widen the disc or measure the pose better"
-        )
-    slowest = platform.slowest_wheel_speed
-    least = slowest * platform.period / sizing.CHORD
-    if radius < least:
-        raise ValueError(
-            f"capture_radius={shown(radius, 'm')} must be >= {shown(rounded_up(least), 'm')}, for in one period at its smallest "
-            f"wheel speed, {shown(slowest, 'm/s')}, the robot passes over the disc; widen it, or shorten the period"
-        )
-    return radius
-
-
 def settling_time(platform: Platform) -> float:
     """Return the time constant (s) at which the schedule takes out the last of a heading error.
 
-    One period, where noise of the heading and an error of the delay allow it; see `sizing.chosen_gain`.
+    One period, where noise of the heading and an error of the delay allow it; see `windows.chosen_gain`.
     """
     delay = platform.dead_time + platform.motor_lag
-    quiet = platform.heading_noise / (sizing.NOISE_SHARE * platform.top_turn_rate)
-    return max(platform.period, quiet, delay / sizing.DELAYS)
+    quiet = platform.heading_noise / (windows.NOISE_SHARE * platform.top_turn_rate)
+    return max(platform.period, quiet, delay / windows.DELAYS)
 
 
 def check_scheduled(**given: object) -> None:
@@ -201,7 +183,7 @@ def checked_speed(platform: Platform, speed: object) -> float | None:
     return asked
 
 
-def check_window(platform: Platform, found: sizing.Window, speed: float, capture_radius: float) -> None:
+def check_window(platform: Platform, found: windows.Window, speed: float, capture_radius: float) -> None:
     """Refuse a speed at which no gain works, with the binding reason and the fastest speed at which one does."""
     workable = shown(rounded_down(found.fastest), "m/s")
     slowest = platform.slowest_wheel_speed
@@ -210,10 +192,10 @@ def check_window(platform: Platform, found: sizing.Window, speed: float, capture
             f"constant_speed=True: the fastest that works is {workable}, slower than the wheels can run ({shown(slowest, 'm/s')}); "
             "leave it out, for the schedule turns on the spot, or widen capture_radius"
         )
-    if speed * platform.period > sizing.CHORD * capture_radius * (1.0 + 1e-12):
+    if speed * platform.period > windows.CHORD * capture_radius * (1.0 + 1e-12):
         raise ValueError(
-            f"capture_radius={shown(capture_radius, 'm')} must be >= speed * period / {sizing.CHORD:g} = "
-            f"{shown(rounded_up(speed * platform.period / sizing.CHORD), 'm')}, for a step must not pass over the disc; "
+            f"capture_radius={shown(capture_radius, 'm')} must be >= speed * period / {windows.CHORD:g} = "
+            f"{shown(rounded_up(speed * platform.period / windows.CHORD), 'm')}, for a step must not pass over the disc; "
             f"widen it, or drive at {workable} or less"
         )
     if speed > found.fastest * (1.0 + 1e-12):
@@ -221,9 +203,9 @@ def check_window(platform: Platform, found: sizing.Window, speed: float, capture
 
 
 def checked_gain(
-    platform: Platform, found: sizing.Window, gain: object, integral_time: object, derivative_time: object, predict: bool
+    platform: Platform, found: windows.Window, gain: object, integral_time: object, derivative_time: object, predict: bool
 ) -> float:
-    chosen = sizing.chosen_gain(platform, found)
+    chosen = windows.chosen_gain(platform, found)
     if gain is not None:
         chosen = check_above_zero("gain", gain, "1/s", "give turn rate per heading error, or leave it out")
         if not found.low * (1.0 - PRINTED) <= chosen <= found.high * (1.0 + PRINTED):
@@ -234,7 +216,7 @@ def checked_gain(
         check_above_zero("integral_time", integral_time, "s", "give the time in which the integral repeats the error; inf for none")
     check_not_negative("derivative_time", derivative_time, "s", "give the time by which the derivative looks ahead; 0 for none")
     delay = () if predict else (platform.dead_time, platform.motor_lag)
-    size = sizing.slowest_root(chosen, float(integral_time), float(derivative_time), platform.period, *delay)  # type: ignore[arg-type]
+    size = slowest_root(chosen, float(integral_time), float(derivative_time), platform.period, *delay)  # type: ignore[arg-type]
     if size >= 1.0:
         raise ValueError(
             f"gain={shown(chosen, '1/s')} with integral_time={shown(integral_time, 's')} and "

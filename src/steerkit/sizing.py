@@ -1,275 +1,145 @@
-"""Sizing: which heading gains work for a robot, and the fastest constant speed at which one does.
+"""Sizing: the gain of a constant speed with its margins and its reasons; where none works, the nearest changes that would do.
 
 The heading loop is turn_rate = clip(gain * error, +-ceiling). A gain works at a speed when it is high enough not to circle the goal
 outside its capture disc, and low enough not to swing. SI units; gains in 1/s. Derived, unless a source is given.
 
-Dead time is counted in periods: delay = d + m, d whole, 0 <= m < 1. The command of step k-d-1 acts for m periods more, then that of
-step k-d. With prediction the loop sees its error where the command takes effect, and behaves as if there were no delay and no lag.
+With prediction the loop sees its error where the command takes effect, and behaves as if there were no delay and no lag.
 """
 
 from __future__ import annotations
 
-import functools
 import math
+import textwrap
 from collections.abc import Callable
+from dataclasses import dataclass, replace
+from pathlib import Path
 from typing import NamedTuple
 
 import numpy as np
-from numpy.typing import NDArray
 
-from steerkit.checks import check_above_zero, check_not_negative
-from steerkit.limits import held_stop_kernel
-from steerkit.platforms import Platform
+from steerkit.checks import check_above_zero, rounded_down, rounded_up, shown
+from steerkit.gain_limits import no_overshoot_gain, sampled_step, slowest_root, stable_gain
+from steerkit.gain_reasons import reasons
+from steerkit.margins import Margins, margins, prediction_margin
+from steerkit.pictures import GainWindow, draw_window
+from steerkit.platforms import SHORTEST_PERIOD, Platform
+from steerkit.windows import (
+    Window,
+    best_ceiling,
+    checked_radius,
+    chosen_gain,
+    circles,
+    no_ringing_gain,
+    orbit_radius,
+    speed_bounds,
+    window,
+)
 
-__all__ = ["Window", "no_overshoot_gain", "no_ringing_gain", "orbit_radius", "slowest_root", "stable_gain", "window"]
+__all__ = [
+    "Change",
+    "Sizing",
+    "Window",
+    "no_overshoot_gain",
+    "no_ringing_gain",
+    "orbit_radius",
+    "size",
+    "slowest_root",
+    "stable_gain",
+    "window",
+]
 
-Array = NDArray[np.float64]
-
-CAPTURE_MARGIN = 1.1  # the orbit is kept this much smaller than the capture disc
-CHORD = 0.8  # a step at constant speed is at most this share of the capture radius, so that no disc is stepped over
-SHARES = 64  # turn rates at which swinging is judged, up to the ceiling
-DELAYS = 2.0  # gain times delay; at 0.8 to 2 times the error of the delay a loop begins to swing (measured)
-NOISE_SHARE = 0.1  # heading noise may move the turn rate by this share of its ceiling (standard deviation); chosen
-SHORT_LAG = 1e-4  # periods; a lag below this is none
-
-
-class Window(NamedTuple):
-    """The gains that work at one constant speed, and the fastest speed at which any does.
-
-    `low`, `high` 1/s; `ceiling` rad/s, the most that the heading law asks for; `margin`, orbit to capture disc;
-    `fastest` m/s; `bound`, the number of the platform that keeps it from being faster.
-    """
-
-    low: float
-    high: float
-    ceiling: float
-    margin: float
-    fastest: float
-    bound: str
-
-
-def split_delay(dead_time: float, period: float) -> tuple[int, float]:
-    """Return the dead time as whole periods and the fraction of one, (d, m)."""
-    check_above_zero("period", period, "s", "give the control period")
-    check_not_negative("dead_time", dead_time, "s", "give the time before a command acts")
-    whole = math.floor(dead_time / period + 1e-12)
-    return whole, max(0.0, dead_time / period - whole)
+LINE = 108  # characters of a printed line
+PRINTED = 1e-3  # a gain that was read from a sentence, four digits, is one of the window
 
 
-@functools.lru_cache(maxsize=64)
-def no_overshoot_gain(period: float, dead_time: float = 0.0, motor_lag: float = 0.0) -> float:
-    """Return the highest proportional gain at which the heading error does not change its sign.
+class Change(NamedTuple):
+    """One change that alone makes a refused demand work: the argument or number of the platform, its new value, its unit."""
 
-    For the loop without prediction; with it, leave dead time and lag at 0. m = 0 is Erbe & Zhang 1989 (from memory).
+    name: str
+    value: float
+    unit: str
 
-    Parameters
-    ----------
-    period : float, s
-    dead_time : float, s
-    motor_lag : float, s
-
-    Returns
-    -------
-    float, 1/s
-    """
-    d, m = split_delay(dead_time, period)
-    if motor_lag > SHORT_LAG * period:
-        return lagged_no_overshoot(d, m, motor_lag / period) / period
-    if m == 0.0:
-        return (math.exp(d * math.log(d / (d + 1.0))) if d else 1.0) / (d + 1.0) / period
-    q, n = 1.0 - m, d + 1.0
-    b = n * (1.0 - 2.0 * m) - 1.0
-    s = math.sqrt(b * b + 4.0 * n * n * q * m)
-    z = (b + s) / (2.0 * n * q) if b >= 0.0 else 2.0 * n * m / (s - b)
-    return z ** (d + 1) * (1.0 - z) / (q * z + m) / period
+    def __str__(self) -> str:
+        if self.name == "predict":
+            return "predict=True"
+        more = "at least" if self.name in MORE or self.name == "capture_radius" else "at most"
+        return f"{self.name} {more} {shown(self.value, self.unit)}"
 
 
-def stable_gain(period: float, dead_time: float = 0.0, motor_lag: float = 0.0) -> float:
-    """Return the proportional gain below which the heading loop is stable.
-
-    For the loop without prediction; with it, leave dead time and lag at 0. m = 0 is Levin & May 1976 (from memory).
-
-    Parameters
-    ----------
-    period : float, s
-    dead_time : float, s
-    motor_lag : float, s
-
-    Returns
-    -------
-    float, 1/s
-    """
-    d, m = split_delay(dead_time, period)
-    if motor_lag > SHORT_LAG * period:
-        return lagged_stable(d, m, motor_lag / period) / period
-    q = 1.0 - m
-    if d == 0:
-        return min(1.0 / m if m > 0.0 else math.inf, 2.0 / (1.0 - 2.0 * m) if m < 0.5 else math.inf) / period
-    low, high = math.pi / (2 * d + 3), math.pi / (2 * d + 1)
-    for _ in range(60):
-        angle = 0.5 * (low + high)
-        phase = (d + 1.5) * angle - math.pi / 2.0 - math.atan2(q * math.sin(angle), q * math.cos(angle) + m)
-        low, high = (angle, high) if phase < 0.0 else (low, angle)
-    return 2.0 * math.sin(angle / 2.0) / math.hypot(q * math.cos(angle) + m, q * math.sin(angle)) / period
+MORE = {"turn_rate_limit": 30.0, "turn_acceleration": 1000.0, "speed_limit": 100.0, "wheel_speed_limit": 100.0}
+LESS = {"dead_time": 0.0, "motor_lag": 0.0, "period": SHORTEST_PERIOD}
+UNITS = {"turn_rate_limit": "rad/s", "turn_acceleration": "rad/s^2", "speed_limit": "m/s", "wheel_speed_limit": "m/s"}
 
 
-def lagged_loop(d: int, m: float, mu: float) -> tuple[Array, Array]:
-    """Return the open loop behind a lag of `mu` periods as polynomials in z, (denominator, numerator), highest power first.
+@dataclass(frozen=True, slots=True)
+class Sizing:
+    """The sizing report of a heading loop at constant speed; `print` it.
 
-    z^(d+1) (z-1)(z-p) and (q z + m)(z-p) - mu (c0 z + c1)(z-1); the closed loop is denominator + gain*period * numerator.
-    """
-    q, p = 1.0 - m, math.exp(-1.0 / mu) if mu > 0.0 else 0.0
-    c0 = -math.expm1(-q / mu) if mu > 0.0 else 1.0
-    c1 = 1.0 - p - c0
-    numerator = np.polymul([q, m], [1.0, -p]) - mu * np.polymul([c0, c1], [1.0, -1.0])
-    return np.concatenate([np.polymul([1.0, -1.0], [1.0, -p]), np.zeros(d + 1)]), numerator
-
-
-def lagged_no_overshoot(d: int, m: float, mu: float) -> float:
-    """Return max of z^(d+1) (1-z)(z-p)/N on p < z < 1: the largest gain*period that keeps a positive real root."""
-    denominator, numerator = lagged_loop(d, m, mu)
-    p = math.exp(-1.0 / mu)
-
-    def gain(z: float) -> float:
-        return float(-np.polyval(denominator, z) / np.polyval(numerator, z))
-
-    low, high = p, 1.0
-    golden = (math.sqrt(5.0) - 1.0) / 2.0
-    for _ in range(90):
-        left, right = high - golden * (high - low), low + golden * (high - low)
-        low, high = (low, right) if gain(left) > gain(right) else (left, high)
-    return gain(0.5 * (low + high))
-
-
-def lagged_stable(d: int, m: float, mu: float) -> float:
-    """Return the least gain*period at which a root of the loop crosses the unit circle."""
-    denominator, numerator = lagged_loop(d, m, mu)
-
-    def loop(angle: Array) -> NDArray[np.complex128]:
-        z = np.exp(1j * angle)
-        return np.asarray(np.polyval(numerator, z) / np.polyval(denominator, z))
-
-    grid = np.linspace(1e-6, math.pi, 400 * (d + 3))
-    side = loop(grid).imag
-    crossings = np.flatnonzero(side[:-1] * side[1:] < 0.0)
-    low, high = grid[crossings], grid[crossings + 1]
-    for _ in range(60):
-        middle = 0.5 * (low + high)
-        same = np.sign(loop(middle).imag) == np.sign(loop(low).imag)
-        low, high = np.where(same, middle, low), np.where(same, high, middle)
-    crossed = np.append(loop(0.5 * (low + high)).real, loop(np.array([math.pi])).real)
-    return float(np.min(-1.0 / crossed[crossed < 0.0]))
-
-
-def slowest_root(
-    gain: float, integral_time: float, derivative_time: float, period: float, dead_time: float = 0.0, motor_lag: float = 0.0
-) -> float:
-    """Return the size of the largest root of the heading loop with P, PI or PID: below 1 it is stable.
-
-    The controller is gain (1 + T/Ti 1/(z-1) + Td/T (z-1)/z), T the period. Used to refuse gains that swing for ever.
-
-    Parameters
-    ----------
-    gain : float, 1/s
-    integral_time : float, s
-        Infinite for none.
-    derivative_time : float, s
-    period : float, s
-    dead_time : float, s
-    motor_lag : float, s
-
-    Returns
-    -------
-    float, no unit
-    """
-    d, m = split_delay(dead_time, period)
-    denominator, numerator = lagged_loop(d, m, motor_lag / period if motor_lag > SHORT_LAG * period else 0.0)
-    share = period / integral_time
-    control = np.polyadd(np.polyadd([1.0, -1.0, 0.0], [share, 0.0]), derivative_time / period * np.array([1.0, -2.0, 1.0]))
-    closed = np.polyadd(np.polymul(denominator, [1.0, -1.0, 0.0]), gain * period * np.polymul(numerator, control))
-    if share == 0.0:
-        closed = np.polydiv(closed, [1.0, -1.0])[0]
-    return float(np.max(np.abs(np.roots(closed))))
-
-
-def orbit_radius(speed: float, gain: float, ceiling: float = math.inf) -> float:
-    """Return the radius of the circle about the goal that a constant speed and a gain end in.
-
-    speed / min(ceiling, pi gain/2): on the circle the heading error is a right angle. Dead time leaves it as it is (derived).
-
-    Parameters
-    ----------
-    speed : float, m/s
-    gain : float, 1/s
-    ceiling : float, rad/s
-
-    Returns
-    -------
-    float, m
-    """
-    check_above_zero("gain", gain, "1/s", "give turn rate per heading error")
-    check_above_zero("ceiling", min(ceiling, 1e9), "rad/s", "give the most that the heading law asks for")
-    return speed / min(ceiling, math.pi * gain / 2.0)
-
-
-def no_ringing_gain(platform: Platform, speed: float, ceiling: float, predict: bool = True) -> float:
-    """Return the highest gain at which the heading does not swing at a constant speed, the turn acceleration counted.
-
-    With prediction, T the period: from any turn rate w up to what the wheels leave of the ceiling, the fall by al T a step must
-    not carry past the goal heading: e >= T w + X(w - al T), X the path of a held stop. e is asked/gain, and the wheels shrink what
-    is asked to w along the curve. Without prediction: no overshoot of the linear loop, and gain <= al/w (derived).
-
-    Parameters
+    Attributes
     ----------
     platform : Platform
-    speed : float, m/s
-    ceiling : float, rad/s
+    capture_radius, speed : float
+        m; m/s, as asked for, or the fastest workable.
     predict : bool
-
-    Returns
-    -------
-    float, 1/s
+    works : bool
+        Whether the gain works at the speed; where it does not, `reason` names the number that binds and `changes` holds the
+        nearest changes each of which alone would do.
+    window : Window
+    gain : float
+        1/s; NaN where none works.
+    margins : Margins or None
+        Of the loop that the controller runs: with prediction, without the delay.
+    shorter, longer : float
+        s; how much the true dead time may fall short of the declared one, and exceed it, before the loop is unstable. Infinite
+        for `shorter` where none at all is borne.
+    settling_time : float
+        s; until the heading stays within 2 % of a small error.
+    longest_settling_time : float
+        s; the same from any error up to pi, at the ceiling and with the turn acceleration.
+    orbit_radius : float
+        m; of the circle about the goal that the robot would end in, were it not captured.
+    why : tuple of str
+        Sentences, each with its number and its source, or "derived", "measured", "chosen".
     """
-    asked = np.linspace(ceiling / SHARES, ceiling, SHARES)
-    given = asked * np.minimum(1.0, platform.wheel_speed_limit / (speed + asked * platform.track_width / 2.0))
-    al, period = platform.turn_acceleration, platform.period
-    if not predict:
-        linear = no_overshoot_gain(period, platform.dead_time, platform.motor_lag)
-        return min(linear, al / float(np.max(given)))
-    carried = np.array([held_stop_kernel(max(0.0, w - al * period), al, period) for w in given.tolist()])
-    return float(1.0 / max(period, np.max((period * given + carried) / asked)))
+
+    platform: Platform
+    capture_radius: float
+    speed: float
+    predict: bool
+    works: bool
+    reason: str
+    changes: tuple[Change, ...]
+    window: Window
+    gain: float
+    margins: Margins | None
+    shorter: float
+    longer: float
+    settling_time: float
+    longest_settling_time: float
+    orbit_radius: float
+    why: tuple[str, ...]
+
+    @property
+    def overshoot(self) -> float:
+        """Overshoot of a small heading step, as a share of it; NaN where no gain works."""
+        return self.margins.overshoot if self.margins else math.nan
+
+    def save_picture(self, path: str | Path) -> None:
+        """Save the picture of the window, gain against speed; needs Matplotlib, and no display."""
+        draw_window(shown_window(self), path)
+
+    def __str__(self) -> str:
+        return "\n".join(report(self))
 
 
-def best_ceiling(platform: Platform, speed: float, predict: bool) -> float:
-    """Return the turn-rate ceiling (rad/s) with the smallest orbit at a speed: a lower ceiling allows a higher gain."""
-
-    def too_high(ceiling: float) -> bool:
-        return ceiling > math.pi / 2.0 * no_ringing_gain(platform, speed, ceiling, predict)
-
-    return bisected(too_high, platform.turn_rate_limit)
-
-
-def bisected(fails: Callable[[float], bool], most: float) -> float:
-    """Return the largest value up to `most` that does not fail, for a test that fails from some value on."""
-    if not fails(most):
-        return most
-    low, high = 0.0, most
-    for _ in range(60):
-        middle = 0.5 * (low + high)
-        low, high = (low, middle) if fails(middle) else (middle, high)
-    return low
-
-
-def stop_depth(capture_radius: float, position_noise: float) -> float:
-    """Return how deep inside the disc a stop is aimed, as a share of its radius: four standard deviations, 0.1 to 0.5."""
-    return min(0.5, max(0.1, 4.0 * position_noise / capture_radius))
-
-
-def window(platform: Platform, capture_radius: float, speed: float | None = None, predict: bool = True) -> Window:
-    """Return the gains that work at a constant speed (m/s), or at the fastest one that has any.
-
-    `low`: on the final circle about the goal the disc is still reached, gain >= margin * 2 v/(pi r). `high`: no swinging. The
-    window is empty (low > high) above `fastest`.
+def size(
+    platform: Platform,
+    capture_radius: float,
+    speed: float | None = None,
+    predict: bool = True,
+    gain: float | None = None,
+) -> Sizing:
+    """Return which heading gains work, the chosen one, its margins, and why; a demand that cannot work is told, not raised.
 
     Parameters
     ----------
@@ -277,55 +147,177 @@ def window(platform: Platform, capture_radius: float, speed: float | None = None
     capture_radius : float, m
     speed : float, m/s, or None for the fastest workable
     predict : bool
-        Whether the heading loop sees its error where the command takes effect.
+        Whether the heading error is taken where the command takes effect.
+    gain : float, 1/s, or None for the chosen one
 
     Returns
     -------
-    Window
+    Sizing
+
+    Examples
+    --------
+    >>> cart = Platform(radius=0.30, track_width=0.42, wheel_speed_limit=1.1, speed_limit=0.9, turn_rate_limit=2.0,
+    ...                 acceleration=0.8, braking=1.2, turn_acceleration=5.0, period=0.05, dead_time=0.12)
+    >>> size(cart, capture_radius=0.10, speed=0.5).changes[0]
+    Change(name='speed', value=0.1818, unit='m/s')
     """
-    check_above_zero("capture_radius", capture_radius, "m", "give the disc about the goal to come to rest in")
-    if speed is not None:
-        check_above_zero("speed", speed, "m/s", "give the constant speed, or leave it out for the fastest workable")
-    margin = CAPTURE_MARGIN * 0.95 / (1.0 - stop_depth(capture_radius, platform.position_noise) / 2.0)
-    reach = capture_radius / margin
-
-    def circles(v: float) -> bool:
-        return v > reach * math.pi / 2.0 * no_ringing_gain(platform, v, v / reach, predict)
-
-    most = {
-        "speed_limit": platform.speed_limit,
-        "wheel_speed_limit": platform.wheel_speed_limit,
-        "period": CHORD * capture_radius / platform.period,
-        "turn_rate_limit": reach * platform.turn_rate_limit,
-    }
-    bound = min(most, key=lambda name: most[name])
-    fastest = bisected(circles, most[bound])
-    if fastest < most[bound]:
-        bound = swing_reason(platform, fastest / reach, predict)
-    asked = fastest if speed is None else speed
-    ceiling = best_ceiling(platform, asked, predict)
-    low = margin * 2.0 * asked / (math.pi * capture_radius)
-    high = no_ringing_gain(platform, asked, ceiling, predict)
-    return Window(min(low, high) if speed is None else low, high, ceiling, margin, fastest, bound)
+    radius = checked_radius(platform, capture_radius)
+    if not isinstance(predict, (bool, np.bool_)):
+        raise TypeError(f"predict={predict!r} must be True or False; True takes the error where the command takes effect")
+    if gain is not None:
+        gain = check_above_zero("gain", gain, "1/s", "give turn rate per heading error, or leave it out")
+    predict = bool(predict)
+    found = window(platform, radius, speed, predict)
+    asked = found.fastest if speed is None else float(speed)
+    chosen = chosen_gain(platform, found) if gain is None else gain
+    why = reasons(platform, radius, asked, predict, found, chosen)
+    if too_fast(platform, radius, asked, predict):
+        changes = changes_for(platform, radius, asked, predict, found)
+        why = reasons(platform, radius, asked, predict, found, math.nan)
+        nothing = (math.nan,) * 5
+        return Sizing(platform, radius, asked, predict, False, found.bound, changes, found, math.nan, None, *nothing, why)
+    works = found.low * (1.0 - PRINTED) <= chosen <= found.high * (1.0 + PRINTED)
+    near = Change("gain", rounded_up(found.low) if chosen < found.low else rounded_down(found.high), "1/s")
+    reason, changes = ("", ()) if works else ("gain", (near,))
+    judged = judgement(platform, asked, predict, chosen, found.ceiling)
+    orbit = orbit_radius(asked, chosen, found.ceiling)
+    return Sizing(platform, radius, asked, predict, works, reason, changes, found, chosen, *judged, orbit, why)
 
 
-def swing_reason(platform: Platform, turn_rate: float, predict: bool) -> str:
-    """Return which number keeps the gain from being high enough to turn at `turn_rate` (rad/s) without swinging."""
-    gain = turn_rate * 2.0 / math.pi
+def judgement(
+    platform: Platform, speed: float, predict: bool, gain: float, ceiling: float
+) -> tuple[Margins, float, float, float, float]:
+    """Return the margins, how much shorter and longer the dead time may truly be, and the two settling times of a sizing (s)."""
+    p = platform
+    delay = (0.0, 0.0) if predict else (p.dead_time, p.motor_lag)
+    judged = margins(gain, period=p.period, dead_time=delay[0], motor_lag=delay[1])
+    if not judged.stable:
+        return judged, 0.0, 0.0, math.inf, math.inf
+    shorter, longer = math.inf, judged.delay_margin
     if predict:
-        return "period" if gain > 0.99 / platform.period else "turn_acceleration"
-    linear = no_overshoot_gain(platform.period, platform.dead_time, platform.motor_lag)
-    if gain < 0.99 * linear:
-        return "turn_acceleration"
-    return "dead_time and motor_lag" if platform.dead_time + platform.motor_lag > platform.period else "period"
+        shorter, longer = prediction_margin(gain, p.period, p.dead_time, p.motor_lag)
+    small = sampled_step(gain, p.period, p.dead_time, p.motor_lag, predict=predict).time
+    return judged, shorter, longer, small, longest_settling(p, speed, predict, gain, ceiling, small)
 
 
-def chosen_gain(platform: Platform, found: Window) -> float:
-    """Return the gain to drive with (1/s): the highest of the window, lower where noise or a long delay asks for it.
+def longest_settling(p: Platform, speed: float, predict: bool, gain: float, ceiling: float, least: float) -> float:
+    """Return the time (s) until the heading stays within 2 % of an error, the longest of errors up to pi, with all limits."""
+    wheels = (speed, p.wheel_speed_limit, p.track_width / 2.0)
+    limits = {"ceiling": ceiling, "turn_acceleration": p.turn_acceleration}
 
-    Prediction takes the delay out of the loop as far as it is known: a gain of 2/(dead time + lag) bears an error of 30 % in it.
-    """
-    quiet = NOISE_SHARE * found.ceiling / platform.heading_noise if platform.heading_noise > 0.0 else math.inf
-    delay = platform.dead_time + platform.motor_lag
-    steady = DELAYS / delay if delay > 0.0 else math.inf
-    return max(min(found.low, found.high), min(found.high, quiet, steady))
+    def time(error: float) -> float:
+        return sampled_step(gain, p.period, p.dead_time, p.motor_lag, predict=predict, step=error, wheels=wheels, **limits).time
+
+    return max(least, *(time(error) for error in np.linspace(math.pi / 8.0, math.pi, 8).tolist()))
+
+
+def too_fast(platform: Platform, capture_radius: float, speed: float, predict: bool) -> bool:
+    """Say whether no gain works at a speed (m/s)."""
+    most = min(speed_bounds(platform, capture_radius).values())
+    slower = speed * (1.0 - 1e-12)
+    return slower > most or circles(platform, capture_radius, slower, predict)
+
+
+def changes_for(platform: Platform, radius: float, speed: float, predict: bool, found: Window) -> tuple[Change, ...]:
+    """Return the nearest changes each of which alone makes a speed workable, to four digits on the safe side, sized again."""
+    changes = [Change("speed", rounded_down(found.fastest), "m/s")]
+
+    def fails(name: str, value: float) -> bool:
+        if name == "capture_radius":
+            return too_fast(platform, value, speed, predict)
+        try:
+            return too_fast(replace(platform, **{name: value}), radius, speed, predict)
+        except ValueError:  # not a platform
+            return True
+
+    def nearest(name: str, value: float, most: float, rounded: Callable[[float], float]) -> None:
+        if most != value and not fails(name, most):
+            bad, good = value, most
+            for _ in range(50):
+                middle = 0.5 * (bad + good)
+                bad, good = (middle, good) if fails(name, middle) else (bad, middle)
+            good = rounded(good) if good > 0.0 else 0.0
+            if not fails(name, good):
+                unit = "m" if name == "capture_radius" else UNITS.get(name, "s")
+                changes.append(Change(name, good, unit))
+
+    nearest("capture_radius", radius, 1000.0 * radius, rounded_up)
+    for name, most in MORE.items():
+        nearest(name, getattr(platform, name), max(most, getattr(platform, name)), rounded_up)
+    for name, least in LESS.items():
+        if name == "period" or not predict:
+            nearest(name, getattr(platform, name), min(least, getattr(platform, name)), rounded_down)
+    if not predict and not too_fast(platform, radius, speed, True):
+        changes.append(Change("predict", 1.0, ""))
+    return tuple(changes)
+
+
+def report(s: Sizing) -> list[str]:
+    """Return the lines of a printed sizing."""
+    w, how = s.window, "with prediction" if s.predict else "without prediction"
+    lines = [f"Heading loop at constant speed, {how}, capture radius {shown(s.capture_radius, 'm')}"]
+    if s.margins is None:
+        lines.append(f"  NO GAIN WORKS at {shown(s.speed, 'm/s')}: bound by {s.reason}. Any one of these would do:")
+        lines += [f"    {one}" for one in s.changes]
+    else:
+        if not s.works:
+            fault = "circles the goal" if s.gain < w.low else "swings"
+            nearest = f"the nearest that works is {s.changes[0].value:g} 1/s"
+            lines.append(f"  DOES NOT WORK: gain {shown(s.gain, '1/s')} {fault}; {nearest}")
+        lines += [f"  {name:13}{value:13}{note}" for name, value, note in [*point_rows(s), *margin_rows(s, s.margins)]]
+    lines.append("Why:")
+    for sentence in s.why:
+        lines += textwrap.wrap(sentence, LINE, initial_indent="  - ", subsequent_indent="    ")
+    return lines
+
+
+def point_rows(s: Sizing) -> list[tuple[str, str, str]]:
+    """Return the printed rows of the point that is driven at."""
+    w = s.window
+    fastest = "the fastest workable" if s.speed >= w.fastest else f"up to {rounded_down(w.fastest):g} m/s works"
+    return [
+        ("speed", f"{rounded_down(s.speed):g} m/s", f"{fastest}; bound by {w.bound}"),
+        ("gain", f"{s.gain:.4g} 1/s", f"{w.low:.4g} to {w.high:.4g} 1/s work"),
+        ("turn rate", f"{min(w.ceiling, s.platform.top_turn_rate):.3g} rad/s", "at most"),
+        ("orbit", f"{s.orbit_radius:.3g} m", "radius of the circle that it would end in, were it not captured"),
+    ]
+
+
+def margin_rows(s: Sizing, m: Margins) -> list[tuple[str, str, str]]:
+    """Return the printed rows of how the loop stands."""
+    if not m.stable:
+        return [("margins", "none", f"unstable; stable below {s.gain * m.gain_margin:.4g} 1/s")]
+    large = f"{s.longest_settling_time:.3g} s of any up to 180 deg"
+    return [
+        ("gain margin", f"{m.gain_margin:.3g}", "times this gain the linear loop begins to swing for ever"),
+        ("phase margin", f"{math.degrees(m.phase_margin):.3g} deg", f"sensitivity {m.sensitivity:.3g}"),
+        ("dead time", f"{s.platform.dead_time:.4g} s", tolerated(s)),
+        ("settling", f"{s.settling_time:.3g} s", f"to 2 % of a small error; {large}"),
+        ("overshoot", f"{100.0 * m.overshoot:.2g} %", "of a small heading step"),
+    ]
+
+
+def tolerated(s: Sizing) -> str:
+    """Say how wrong the declared dead time may be."""
+    more = f"{s.longer:.3g} s longer"
+    if not s.predict:
+        return f"stable while it is truly less than {more}"
+    return f"stable while it is truly less than {more}" + (f" and {s.shorter:.3g} s shorter" if s.shorter < math.inf else "")
+
+
+def shown_window(s: Sizing) -> GainWindow:
+    """Return what the picture of a sizing shows."""
+    w = s.window
+    end = min(1.18 * max(w.fastest, s.speed), 3.0 * w.fastest)
+    speeds = np.union1d(np.linspace(end / 1000.0, end, 100), [w.fastest]).tolist()
+    low = [w.margin * 2.0 * v / (math.pi * s.capture_radius) for v in speeds]
+    high = [no_ringing_gain(s.platform, v, best_ceiling(s.platform, v, s.predict), s.predict) for v in speeds]
+    own = s.margins is None or s.gain == chosen_gain(s.platform, w)
+    name = f"{'chosen' if own else 'asked'}: {s.gain:.3g} 1/s at {s.speed:.3g} m/s"
+    if s.works and own and s.gain < 0.999 * w.high:
+        name += f"\n{w.high:.3g} 1/s would still not swing"
+    if not s.works:
+        name += "\ncircles the goal" if s.gain < w.low else "\nswings"
+    title = f"Gains that work, {'with' if s.predict else 'without'} prediction, capture radius {s.capture_radius:.3g} m"
+    asked = s.speed if s.margins is None else math.nan
+    return GainWindow(speeds, low, high, w.fastest, w.bound, s.speed, s.gain, name, asked, title)

@@ -215,7 +215,7 @@ def step_kernel(settings: Sequence[float], memory: Sequence[float], measured: Se
         fastest_v, fastest_w = max(abs(v), abs(last_v)), max(abs(w), abs(last_w))
         jumped = jumped_kernel(memory, settings, x, y, heading, span, fastest_v, fastest_w)
     blur = settings[11] + settings[12] * half_track
-    patience = SILENT_PERIODS * period + 0.5 * (dead_time + lag)
+    patience = SILENT_PERIODS * period + dead_time + lag
     posed = pose_trouble == 0 and not local
     if watch_kernel(memory, out, posed, x, y, heading, told_v, told_w, since, blur, half_track, patience, top, settings[29]):
         causes |= NO_ANSWER

@@ -11,7 +11,7 @@ import math
 
 from steerkit.compiled import kernel
 
-CLOSE = 1e-9  # of a step; nearer is on it
+CLOSE = 1e-10  # of a step; nearer is on it
 IN_BAND = 4.0  # weight of a wheel within the dead band
 TURNING, PATH, SPOT = 2.0, 0.5, 4.0  # weights: wheels apart from each other; both from the path; the same on the spot
 
