@@ -308,11 +308,11 @@ def studies(n: int) -> dict[str, tuple[Callable[[str], np.ndarray], bool]]:
 def main() -> None:
     parser = argparse.ArgumentParser(description=__doc__)
     parser.add_argument("--runs", type=int, default=2000)
-    parser.add_argument("--only", default="", help="part of a study's name")
+    parser.add_argument("--only", default="", help="how a study's name begins")
     parser.add_argument("--save", default="", help="write the rows of each study to this folder, as NumPy files")
     chosen = parser.parse_args()
     for name, (study, by_lag) in studies(chosen.runs).items():
-        if chosen.only in name:
+        if name.startswith(chosen.only):
             rows = study(name)
             show(name, rows, by_lag)
             if chosen.save:

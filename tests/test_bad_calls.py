@@ -9,10 +9,17 @@ import pytest
 from robots import CART
 from robots import cart as platform
 from steerkit import Controller, Platform, angles, kinematics, limits, sizing  # noqa: F401
+from steerkit.following import following_distance  # noqa: F401
+from steerkit.margins import margins, prediction_margin  # noqa: F401
+from steerkit.sizing import size  # noqa: F401
 
 
 def controller(**changes):
-    return Controller(platform(), **({"capture_radius": 0.1} | changes))
+    return Controller(platform(), **({"capture_radius": 0.1, "constant_speed": True} | changes))
+
+
+def scheduled(robot=None, **changes):
+    return Controller(robot or platform(), **({"capture_radius": 0.1} | changes))
 
 
 BAD_CALLS = [
@@ -186,7 +193,7 @@ BAD_CALLS = [
     ),
     (
         "capture radius below a step",
-        "Controller(platform(period=0.2, turn_rate_limit=10.0, turn_acceleration=100.0), capture_radius=0.05, speed=0.3)",
+        "Controller(platform(period=0.2, turn_rate_limit=10.0, turn_acceleration=100.0), capture_radius=0.05, constant_speed=True, speed=0.3)",
         ValueError,
         "capture_radius=0.05 m must be >= speed * period / 0.8 = 0.075 m, for a step must not pass over the disc; widen it, or drive at 0.2 m/s or less",
     ),
@@ -198,7 +205,7 @@ BAD_CALLS = [
     ),
     (
         "constant speed above the wheels",
-        "Controller(platform(wheel_speed_limit=0.5), capture_radius=0.3, speed=0.6)",
+        "Controller(platform(wheel_speed_limit=0.5), capture_radius=0.3, constant_speed=True, speed=0.6)",
         ValueError,
         "speed=0.6 m/s must be <= wheel_speed_limit=0.5 m/s; ask for less",
     ),
@@ -210,13 +217,13 @@ BAD_CALLS = [
     ),
     (
         "constant speed with no window for the turn acceleration",
-        "Controller(platform(turn_acceleration=0.5), capture_radius=0.1, speed=0.2)",
+        "Controller(platform(turn_acceleration=0.5), capture_radius=0.1, constant_speed=True, speed=0.2)",
         ValueError,
         "speed=0.2 m/s: no gain works, bound by turn_acceleration; at 0.1128 m/s or less one does",
     ),
     (
         "constant speed with no window for the dead time",
-        "Controller(platform(dead_time=0.5), capture_radius=0.1, speed=0.15, predict=False)",
+        "Controller(platform(dead_time=0.5), capture_radius=0.1, constant_speed=True, speed=0.15, predict=False)",
         ValueError,
         "speed=0.15 m/s: no gain works, bound by dead_time and motor_lag; at 0.1001 m/s or less one does",
     ),
@@ -350,7 +357,7 @@ BAD_CALLS = [
         "file truncated",
         "Platform.from_json(platform().to_json()[:-20])",
         ValueError,
-        "the platform file is not whole JSON (Unterminated string starting at: line 16 column 3 (char 402)); write it again with Platform.to_json",
+        "the platform file is not whole JSON (Unterminated string starting at: line 18 column 3 (char 479)); write it again with Platform.to_json",
     ),
     (
         "file of a later version",
@@ -362,7 +369,7 @@ BAD_CALLS = [
         "file with an unknown key",
         "Platform.from_json(platform().to_json().replace('radius_m', 'wheel_base_m'))",
         ValueError,
-        "the platform file has unknown keys ['wheel_base_m']; known are ['acceleration_m_per_s2', 'braking_m_per_s2', 'dead_time_s', 'heading_noise_rad', 'motor_lag_s', 'period_s', 'position_noise_m', 'radius_m', 'reverse_speed_limit_m_per_s', 'speed_limit_m_per_s', 'track_width_m', 'turn_acceleration_rad_per_s2', 'turn_rate_limit_rad_per_s', 'wheel_speed_limit_m_per_s']",
+        "the platform file has unknown keys ['wheel_base_m']; known are ['acceleration_m_per_s2', 'braking_m_per_s2', 'dead_time_s', 'heading_noise_rad', 'motor_lag_s', 'period_s', 'position_noise_m', 'radius_m', 'reverse_speed_limit_m_per_s', 'smallest_wheel_speed_m_per_s', 'speed_limit_m_per_s', 'track_width_m', 'turn_acceleration_rad_per_s2', 'turn_rate_limit_rad_per_s', 'wheel_speed_limit_m_per_s', 'wheel_speed_resolution_m_per_s']",
     ),
     (
         "file that lacks a number",
@@ -447,6 +454,246 @@ BAD_CALLS = [
         "angles.mean([0.1, 0.2, 0.3], weights=[1.0, 2.0])",
         ValueError,
         "weights of shape (2,) does not fit; give one weight per angle, shape (3,)",
+    ),
+    (
+        "smallest wheel speed negative",
+        "platform(smallest_wheel_speed=-0.01)",
+        ValueError,
+        "smallest_wheel_speed=-0.01 m/s must be >= 0; give the speed below which a wheel stands still, 0 if not seen",
+    ),
+    (
+        "smallest wheel speed in millimetres",
+        "platform(smallest_wheel_speed=30)",
+        ValueError,
+        "smallest_wheel_speed=30 m/s must be <= 10 m/s; is it in mm/s? give the speed below which a wheel stands still, 0 if not seen",
+    ),
+    (
+        "smallest wheel speed above the speed limit",
+        "platform(smallest_wheel_speed=0.95)",
+        ValueError,
+        "smallest_wheel_speed=0.95 m/s must be <= speed_limit=0.9 m/s, else the wheels never move; measure them again",
+    ),
+    (
+        "smallest wheel speed above the wheel-speed limit",
+        "platform(smallest_wheel_speed=0.5, wheel_speed_limit=0.4)",
+        ValueError,
+        "smallest_wheel_speed=0.5 m/s must be <= wheel_speed_limit=0.4 m/s, else the wheels never move; measure them again",
+    ),
+    (
+        "smallest wheel speed too high to turn",
+        "platform(smallest_wheel_speed=0.5)",
+        ValueError,
+        "smallest_wheel_speed=0.5 m/s must be <= turn_rate_limit * track_width / 2 = 0.42 m/s, else it cannot turn on the spot; raise the turn-rate limit",
+    ),
+    (
+        "smallest wheel speed too high to turn, on a grid",
+        "platform(smallest_wheel_speed=0.4, wheel_speed_resolution=0.15)",
+        ValueError,
+        "smallest_wheel_speed=0.4 m/s in steps of wheel_speed_resolution=0.15 m/s (0.45 m/s) must be <= turn_rate_limit * track_width / 2 = 0.42 m/s, else it cannot turn on the spot; raise the turn-rate limit",
+    ),
+    (
+        "resolution negative",
+        "platform(wheel_speed_resolution=-0.01)",
+        ValueError,
+        "wheel_speed_resolution=-0.01 m/s must be >= 0; give the step of the wheel-speed command, 0 for any",
+    ),
+    (
+        "resolution coarser than the speed limit",
+        "platform(wheel_speed_resolution=1.0)",
+        ValueError,
+        "smallest_wheel_speed=0 m/s in steps of wheel_speed_resolution=1 m/s (1 m/s) must be <= speed_limit=0.9 m/s, else the wheels never move; measure them again",
+    ),
+    (
+        "disc stepped over at the smallest speed",
+        "scheduled(platform(smallest_wheel_speed=0.3, period=0.4, dead_time=0.0))",
+        ValueError,
+        "capture_radius=0.1 m must be >= 0.15 m, for in one period at its slowest wheel speed, 0.3 m/s, the robot passes over the disc; widen it, or shorten the period",
+    ),
+    (
+        "schedule with a speed",
+        "scheduled(speed=0.3)",
+        ValueError,
+        "speed=0.3 is for constant_speed=True; pass that too, or leave speed out",
+    ),
+    (
+        "schedule with a gain",
+        "scheduled(gain=2.0)",
+        ValueError,
+        "gain=2.0 is for constant_speed=True; pass that too, or leave gain out",
+    ),
+    (
+        "schedule with an integral",
+        "scheduled(integral_time=2.0)",
+        ValueError,
+        "integral_time=2.0 is for constant_speed=True; pass that too, or leave integral_time out",
+    ),
+    (
+        "schedule with a derivative",
+        "scheduled(derivative_time=0.1)",
+        ValueError,
+        "derivative_time=0.1 is for constant_speed=True; pass that too, or leave derivative_time out",
+    ),
+    (
+        "schedule without prediction",
+        "scheduled(predict=False)",
+        ValueError,
+        "predict=False is for constant_speed=True; pass that too, or leave predict out",
+    ),
+    (
+        "constant speed no bool",
+        "scheduled(constant_speed=0.3)",
+        TypeError,
+        "constant_speed=0.3 must be True or False; True drives at constant speed, False by the schedule",
+    ),
+    (
+        "constant speed below the smallest",
+        "Controller(platform(smallest_wheel_speed=0.1), capture_radius=0.1, constant_speed=True, speed=0.05)",
+        ValueError,
+        "speed=0.05 m/s must be >= 0.1 m/s, the slowest that the wheels can run; ask for more",
+    ),
+    (
+        "no constant speed as slow as the wheels can run",
+        "Controller(platform(smallest_wheel_speed=0.2), capture_radius=0.1, constant_speed=True)",
+        ValueError,
+        "constant_speed=True: the fastest that works is 0.1818 m/s, slower than the wheels can run (0.2 m/s); leave it out, for the schedule turns on the spot, or widen capture_radius",
+    ),
+    (
+        "margins of a negative gain",
+        "margins(-1.0)",
+        ValueError,
+        "gain=-1 1/s must be > 0; give turn rate per heading error",
+    ),
+    (
+        "margins of no gain",
+        "margins(0.0)",
+        ValueError,
+        "gain=0 1/s must be > 0; give turn rate per heading error",
+    ),
+    (
+        "margins of NaN",
+        "margins(math.nan)",
+        ValueError,
+        "gain=nan 1/s must be finite; give turn rate per heading error",
+    ),
+    (
+        "margins of a string",
+        "margins('2')",
+        TypeError,
+        "gain='2' must be a number in 1/s; give turn rate per heading error",
+    ),
+    (
+        "margins, integral time zero",
+        "margins(1.0, integral_time=0.0)",
+        ValueError,
+        "integral_time=0 s must be > 0; give the time in which the integral repeats the error; inf for none",
+    ),
+    (
+        "margins, integral time minus infinity",
+        "margins(1.0, integral_time=-math.inf)",
+        ValueError,
+        "integral_time=-inf s must be finite; give the time in which the integral repeats the error; inf for none",
+    ),
+    (
+        "margins, derivative time negative",
+        "margins(1.0, derivative_time=-0.1)",
+        ValueError,
+        "derivative_time=-0.1 s must be >= 0; give the time by which the derivative looks ahead; 0 for none",
+    ),
+    (
+        "margins, derivative time infinite",
+        "margins(1.0, derivative_time=math.inf)",
+        ValueError,
+        "derivative_time=inf s must be finite; give the time by which the derivative looks ahead; 0 for none",
+    ),
+    (
+        "margins, period negative",
+        "margins(1.0, period=-0.05)",
+        ValueError,
+        "period=-0.05 s must be >= 0; give the control period, or 0 for a continuous controller",
+    ),
+    (
+        "margins, period too short",
+        "margins(1.0, period=1e-6)",
+        ValueError,
+        "period=1e-06 s must be >= 0.0001 s, or 0 for a continuous controller; give seconds",
+    ),
+    (
+        "margins, dead time of too many periods",
+        "margins(1.0, period=1e-3, dead_time=200.0)",
+        ValueError,
+        "dead_time=200 s must be <= 100 s, 100000 periods; give seconds",
+    ),
+    (
+        "margins, dead time negative",
+        "margins(1.0, dead_time=-0.1)",
+        ValueError,
+        "dead_time=-0.1 s must be >= 0; give the time before a command acts",
+    ),
+    (
+        "margins, lag negative",
+        "margins(1.0, motor_lag=-0.1)",
+        ValueError,
+        "motor_lag=-0.1 s must be >= 0; give the time constant of the wheels, 0 for none",
+    ),
+    (
+        "prediction margin without a period",
+        "prediction_margin(1.0, 0.0, 0.1)",
+        ValueError,
+        "period=0 s must be > 0; give the control period",
+    ),
+    (
+        "prediction margin of a negative gain",
+        "prediction_margin(-1.0, 0.05, 0.1)",
+        ValueError,
+        "gain=-1 1/s must be > 0; give turn rate per heading error",
+    ),
+    (
+        "sizing of a dict",
+        "size({'radius': 0.3}, 0.1)",
+        TypeError,
+        "platform={'radius': 0.3} must be a Platform; build one from the robot's measured numbers",
+    ),
+    (
+        "sizing for no disc",
+        "size(platform(), 0.0)",
+        ValueError,
+        "capture_radius=0 m must be > 0; give the disc about the goal to come to rest in",
+    ),
+    (
+        "sizing for a disc within the noise",
+        "size(platform(position_noise=0.02), 0.1)",
+        ValueError,
+        "capture_radius=0.1 m must be >= 0.16 m, eight standard deviations of position_noise; widen the disc or measure the pose better",
+    ),
+    (
+        "sizing at a negative speed",
+        "size(platform(), 0.1, speed=-0.5)",
+        ValueError,
+        "speed=-0.5 m/s must be > 0; give the constant speed, or leave it out for the fastest workable",
+    ),
+    (
+        "sizing at a word",
+        "size(platform(), 0.1, speed='fast')",
+        TypeError,
+        "speed='fast' must be a number in m/s; give the constant speed, or leave it out for the fastest workable",
+    ),
+    (
+        "sizing, predict a number",
+        "size(platform(), 0.1, predict=2)",
+        TypeError,
+        "predict=2 must be True or False; True takes the error where the command takes effect",
+    ),
+    (
+        "sizing with no gain",
+        "size(platform(), 0.1, gain=0.0)",
+        ValueError,
+        "gain=0 1/s must be > 0; give turn rate per heading error, or leave it out",
+    ),
+    (
+        "sizing with an infinite gain",
+        "size(platform(), 0.1, gain=math.inf)",
+        ValueError,
+        "gain=inf 1/s must be finite; give turn rate per heading error, or leave it out",
     ),
 ]
 
