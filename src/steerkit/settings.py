@@ -16,6 +16,7 @@ from steerkit.gain_limits import slowest_root
 from steerkit.platforms import Platform
 
 PRINTED = 1e-3  # a gain that was read from a sentence, four digits, is one of the window
+QUIET = 0.05  # of the fastest turn: what noise of the heading may move the turn rate by, standard deviation; chosen
 STOP_DEPTH, AIM_DEPTH = 0.02, 0.05  # of the capture radius: how deep the schedule's stops end, and its braking
 FLAGS = {
     "constant_speed": "True drives at constant speed, False by the schedule",
@@ -154,10 +155,10 @@ def check_flags(**given: object) -> None:
 def settling_time(platform: Platform) -> float:
     """Return the time constant (s) at which the schedule takes out the last of a heading error.
 
-    One period, where noise of the heading and an error of the delay allow it; see `windows.chosen_gain`.
+    One period, where noise of the heading and an error of the delay allow it (a gain of 2/delay bears 30 %; see `windows`).
     """
     delay = platform.dead_time + platform.motor_lag
-    quiet = platform.heading_noise / (windows.NOISE_SHARE * platform.top_turn_rate)
+    quiet = platform.heading_noise / (QUIET * platform.top_turn_rate)
     return max(platform.period, quiet, delay / windows.DELAYS)
 
 
