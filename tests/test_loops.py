@@ -36,7 +36,7 @@ from types import SimpleNamespace
 import numpy as np
 import pytest
 
-from steerkit import Causes, Frame, Measurement, Phase
+from steerkit import Causes, Frame, Measurement, Phase, Slowing
 
 PAGE = Path(__file__).parents[1] / "docs" / "loops.md"
 ROUNDING = 1e-9  # s, m: sums of a few hundred periods
@@ -116,11 +116,11 @@ class Spy:
 # The page
 
 
-def test_page_holds_nine_recipes_each_with_code_that_the_contents_name():
+def test_page_holds_eleven_recipes_each_with_code_that_the_contents_name():
     titles = [title for title in sections() if title != "The cart"]
     got = re.findall(r"^\d+\. \[(.+)\]\(#(.+)\)$", PAGE.read_text(encoding="utf-8"), flags=re.MULTILINE)
     expected = [(title.split(". ", 1)[1], re.sub(r"[^\w -]", "", title.lower()).replace(" ", "-")) for title in titles]
-    assert len(titles) == 9
+    assert len(titles) == 11
     assert got == expected
     assert all(sections().values())
 
@@ -131,7 +131,7 @@ def test_no_code_of_the_page_is_left_out():
     assert text.count("```") == 2 * text.count("```python")  # no block in another language that nobody runs
 
 
-@pytest.mark.parametrize("number", range(1, 10))
+@pytest.mark.parametrize("number", range(1, 12))
 def test_every_block_runs(number):
     assert recipe(number)
 
@@ -815,10 +815,34 @@ def test_replay_gives_the_same_bits_and_notices_one_wrong_bit(tmp_path):
         decision = names.replay(before, row)
         results = [*decision.command, decision.phase, decision.causes]
         assert decision.memory.to_bytes() == row[:size].tobytes()
-        assert np.array(results, dtype=float).tobytes() == row[size + 15 : size + 21].tobytes()
+        assert np.array(results, dtype=float).tobytes() == row[size + 17 : size + 23].tobytes()
         wrong = row.copy()
         wrong[size + 1] = np.nextafter(row[size + 1], math.inf)  # x, by one unit in the last place
         assert names.replay(before, wrong).memory.to_bytes() != row[:size].tobytes()
+
+
+def test_replay_takes_every_field_of_a_measurement(monkeypatch):
+    names = names_of(5)
+    door, spy = names.controller.in_place(0.0), Spy(names.controller)
+    monkeypatch.setitem(recipe(5), "controller", spy)
+    before = door.row.copy()
+    door.measurement[:] = range(17)
+    names.replay(before, door.row)
+    place = {name: float(k) for k, name in enumerate(door.MEASURED)}
+    expected = Measurement(
+        place["time"],
+        [place["x"], place["y"], place["heading"]],
+        [place["goal_x"], place["goal_y"]],
+        pose_time=place["pose_time"],
+        goal_frame=place["goal_frame"],
+        speed=place["speed"],
+        turn_rate=place["turn_rate"],
+        speed_limit=place["speed_limit"],
+        hold=place["hold"],
+        applied=[place["applied_speed"], place["applied_turn_rate"]],
+        next_goal=[place["next_goal_x"], place["next_goal_y"]],
+    )
+    assert spy.seen == [expected]
 
 
 def test_logged_drive_is_that_of_the_pure_step(tmp_path):
@@ -833,7 +857,7 @@ def test_logged_drive_is_that_of_the_pure_step(tmp_path):
         memory = decision.memory
         got.append(decision.command)
         clock.sleep(0.05)
-    assert np.array(got).tobytes() == np.ascontiguousarray(rows[:, size + 15 : size + 19]).tobytes()
+    assert np.array(got).tobytes() == np.ascontiguousarray(rows[:, size + 17 : size + 21]).tobytes()
 
 
 def test_places_named_in_the_page_are_those_of_a_measurement():
@@ -844,6 +868,7 @@ def test_places_named_in_the_page_are_those_of_a_measurement():
     got = door.step()
     decision = names.controller.step(names.controller.start(0.0), Measurement(0.0, (1.0, 2.0, 0.5), (5.0, 3.0), pose_time=-0.05))
     assert (got[names.LEFT], got[names.RIGHT], got[names.PHASE]) == (*decision.command[:2], decision.phase)
+    assert (got[names.SLOWED_BY], got[names.SLOWEST]) == (decision.report.slowed_by, decision.report.slowest)
     assert door.memory.tobytes() == decision.memory.to_bytes()
 
 
@@ -880,6 +905,7 @@ def test_row_of_the_pure_step_holds_what_its_columns_say():
     assert (got["time"], got["x"], got["y"], got["heading"], got["phase"]) == (0.0, 1.0, 2.0, 0.5, Phase.DRIVING)
     assert got["distance"] == pytest.approx(5.0)  # 3, 4, 5
     assert (got["left"], got["right"]) == decision.command[:2]
+    assert (got["slowed_by"], got["slowest"]) == (Slowing.ACCELERATION, 0.0)  # from rest the ramp binds; no smallest speed declared
 
 
 # 6. Units
@@ -1014,10 +1040,11 @@ def test_hold_alone_brakes_along_the_curve():
     names = names_of(7)
     clock = names.Clock()
     robot, memory = names.StandIn(clock), names.controller.start(0.0, motion=(0.5, 0.4))
-    got = []
+    robot.motion, got = (0.5, 0.4), []
     for _ in range(20):
         decision = names.controller.step(memory, Measurement(clock(), robot.pose(), (4.0, 1.0), hold=True))
         memory = decision.memory
+        robot.wheels(*decision.command[:2])
         got.append(decision.command[2:])
         clock.sleep(names.cart.period)
     expected = np.maximum(0.5 - 0.9 * 0.05 * np.arange(1, 21), 0.0)
@@ -1070,7 +1097,7 @@ def test_pose_five_times_a_second_and_late_still_arrives(pose, goal):
 
 def test_default_age_holds_before_every_new_pose():
     names = names_of(8)
-    controller = names.Controller(names.cart, capture_radius=0.30, speed=0.5)
+    controller = names.Controller(names.cart, capture_radius=0.30)
     assert controller.settings.stale_after == pytest.approx(0.25)
     decisions, _, _ = slow_drive(controller, *STARTS[0])
     got = [Causes.STALE_POSE in decision.causes for decision in decisions[3:]]
@@ -1163,3 +1190,132 @@ def test_sighting_needs_no_correction_for_its_age():
     goal = names.goal_from(0.0, 5.0 - 0.45)
     decision = names.docking.step(memory, Measurement(0.0, goal=goal, goal_frame=Frame.ROBOT, pose_time=-0.1))
     assert decision.report.distance == pytest.approx(5.0 - 1.2 - 0.04)
+
+
+# 10. Way points
+
+ROUND = [(3.0, 0.0), (4.5, 1.5), (4.5, 4.0), (0.0, 4.0)]
+BACK = [(3.0, 0.0), (1.0, 0.1), (1.0, 3.0)]
+
+
+def passing(goals):
+    """Return the decisions of the page's drive, the true pose at each step, and the pose a second after the end."""
+    names = names_of(10)
+    clock = names.Clock()
+    robot, truth = names.StandIn(clock), []
+
+    def sleep(seconds):
+        truth.append(robot.pose())
+        clock.sleep(seconds)
+
+    decisions = names.drive(robot, goals, clock, sleep)
+    truth.append(robot.pose())
+    clock.sleep(1.0)
+    return decisions, truth, robot.pose()
+
+
+@pytest.mark.parametrize("goals", [ROUND, BACK])
+def test_way_points_are_passed_in_order_and_the_last_is_arrived_at(goals):
+    radius = names_of(10).controller.capture_radius
+    decisions, truth, end = passing(goals)
+    passed = [k for k, decision in enumerate(decisions) if decision.phase == Phase.PASSED]
+    assert len(passed) == len(goals) - 1
+    assert [k for k, decision in enumerate(decisions) if decision.phase == Phase.ARRIVED] == [len(decisions) - 1]
+    assert math.dist(end[:2], goals[-1]) <= radius
+    for goal, k in zip(goals, passed, strict=False):
+        # The command of step k rules from the dead time, two periods, to the end of a third: by then the disc is touched, and not
+        # before (the step counts a touch from 2 % within the rim).
+        away = [math.dist(pose[:2], goal) for pose in truth[k : k + 4]]
+        assert min(away) <= radius
+        assert min(away[:3]) > 0.97 * radius
+    assert [decisions[k + 1].report.goal for k in passed] == goals[1:]
+
+
+def test_way_points_on_a_straight_line_cost_no_time():
+    row, _, _ = passing([(1.5, 0.0), (3.0, 0.0), (4.0, 0.0), (6.0, 0.0)])
+    alone, _, _ = passing([(6.0, 0.0)])
+    assert [decision.command for decision in row] == [decision.command for decision in alone]
+
+
+def test_round_is_driven_without_a_stop():
+    decisions, _, _ = passing(ROUND)
+    speeds = np.array([decision.command.speed for decision in decisions])
+    running = np.flatnonzero(speeds > 0.4)
+    assert speeds[running[0] : running[-1]].min() > 0.4  # of 0.5 m/s: between start and end it never slows for a way point
+
+
+def test_in_place_door_passes_way_points_as_the_pure_step_does():
+    names = names_of(10)
+    decisions, truth, _ = passing(ROUND)
+    door, legs = names.controller.in_place(0.0), itertools.pairwise([*ROUND, names.NOWHERE])
+    door.measurement[names.GOAL], door.measurement[names.NEXT_GOAL] = next(legs)
+    for decision, pose, k in zip(decisions, truth, itertools.count()):
+        door.measurement[:4] = decision.memory.time, *pose
+        got = door.step()
+        assert got[4] == decision.phase, k
+        assert door.memory.tobytes() == decision.memory.to_bytes()
+        if decision.phase == Phase.PASSED:
+            door.measurement[names.GOAL], door.measurement[names.NEXT_GOAL] = next(legs)
+
+
+# 11. No answer
+
+
+def stiffly(goal, least):
+    """Drive a robot whose wheels stand still below `least(time)`, m/s; return decisions, when it ended (s), and the robot."""
+    names = names_of(11)
+    clock, told, decisions = names.Clock(), [], []
+
+    class Robot(names.Stiff):
+        def wheels(self, left, right):
+            self.least = least(clock())
+            told.append((left, right))
+            super().wheels(left, right)
+
+    def step(memory, measurement):
+        decisions.append(names.careful.step(memory, measurement))
+        return decisions[-1]
+
+    robot = Robot(clock)
+    with pytest.MonkeyPatch.context() as patch:
+        patch.setitem(recipe(11), "careful", SimpleNamespace(start=names.careful.start, step=step))
+        names.drive(robot, goal, clock, clock.sleep)
+    assert told[-1] == (0.0, 0.0)
+    return decisions, clock(), robot
+
+
+@pytest.mark.parametrize(("least", "goal"), [(0.05, (-0.6, 0.0)), (0.05, (4.0, 1.0)), (0.06, (0.4, 0.0)), (0.06, (0.0, 0.5))])
+def test_smallest_speed_declared_too_low_is_found_and_the_drive_ends_at_the_goal(least, goal):
+    decisions, _, robot = stiffly(goal, lambda time: least)
+    robot.clock.sleep(1.0)
+    assert decisions[-1].phase == Phase.ARRIVED
+    assert math.dist(robot.pose()[:2], goal) <= 0.05
+    # By construction: tenths are added until the wheels move, to three times 0.02 m/s at most.
+    assert least <= decisions[-1].report.slowest <= min(1.1 * least, 0.06) + ROUNDING
+    silent = [decision for decision in decisions if Causes.NO_ANSWER in decision.causes]
+    assert len(silent) * 0.05 > 3.0  # longer than the patience: raising counts as going on
+
+
+def test_robot_that_answers_is_not_taken_for_one_that_does_not():
+    decisions, _, _ = stiffly((4.0, 1.0), lambda time: 0.02)
+    assert decisions[-1].phase == Phase.ARRIVED
+    assert not any(Causes.NO_ANSWER in decision.causes for decision in decisions)
+    assert {decision.report.slowest for decision in decisions} == {0.02}
+
+
+@pytest.mark.parametrize("off", [0.0, 2.0])
+def test_drive_ends_some_seconds_after_the_motors_went_off(off):
+    decisions, end, _ = stiffly((4.0, 1.0), lambda time: math.inf if time >= off else 0.0)
+    assert decisions[-1].phase == Phase.DRIVING
+    assert Causes.NO_ANSWER in decisions[-1].causes
+    assert decisions[-1].report.slowest == 0.02  # told to run much faster than that: its smallest speed is not to blame
+    # The last command obeyed is over a dead time after `off`, and a period for the pose to show it. Then seven periods and the dead
+    # time of silence, a period more as they must be exceeded, and 3 s of patience, likewise.
+    assert off + 3.0 < end <= off + 0.10 + 0.05 + 7 * 0.05 + 0.10 + 0.05 + 3.0 + 0.05 + ROUNDING
+
+
+def test_drive_goes_on_after_a_short_block():
+    decisions, _, _ = stiffly((4.0, 1.0), lambda time: math.inf if 2.0 <= time < 4.0 else 0.0)
+    silent = [decision.memory.time for decision in decisions if Causes.NO_ANSWER in decision.causes]
+    assert 2.0 < min(silent) < max(silent) < 4.0 + 0.10 + 0.10  # until the pose shows the first command obeyed
+    assert decisions[-1].phase == Phase.ARRIVED

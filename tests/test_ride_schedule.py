@@ -31,7 +31,8 @@ from steerkit.step import step_kernel
 CARRIAGE = ride.CARRIAGE
 FOLLOW_RADIUS = 1.0  # m, the carriage's own; the schedule needs no 20 m
 BAND = replace(CARRIAGE, smallest_wheel_speed=0.3, wheel_speed_resolution=0.1)
-FINE = 20  # pieces of half a period (or so): 2.5 ms, 4 cm at top speed
+FINE = 20  # pieces of half a period; the fraction of the dead time is half a period, too
+FINE_STEP = 0.0025  # s, so; 4 cm at top speed
 
 
 def follower(radius: float = FOLLOW_RADIUS) -> Controller:
@@ -71,7 +72,7 @@ def spaced(spacing: float) -> np.ndarray:
     """Return the fixes `spacing` (m of path) apart, m, shape (n, 2)."""
     track = ride.read_ride()
     length = ride.path_lengths(track)
-    return np.column_stack([track.x, track.y])[np.searchsorted(length, np.arange(spacing, length[-1], spacing))]
+    return np.column_stack([track.x, track.y])[np.unique(np.searchsorted(length, np.arange(spacing, length[-1], spacing)))]
 
 
 class Path(NamedTuple):
@@ -137,7 +138,9 @@ def touches(log: ride.Log, platform: Platform, points: np.ndarray, radius: float
         away = np.hypot(path.x[first:last] - point[0], path.y[first:last] - point[1])
         nearest[i] = away.min()
         if nearest[i] <= radius:
-            touched[i] = since = path.time[first + np.argmax(away <= radius)]
+            k = int(np.argmax(away <= radius))
+            since = path.time[first + k]
+            touched[i] = since if k == 0 else since - FINE_STEP * (radius - away[k]) / (away[k - 1] - away[k])
     acted = passed + platform.dead_time + platform.period
     speed = np.interp(acted, log.time, log.speed)
     left = np.interp(touched[: len(passed)], path.time, path.length) - np.interp(acted, path.time, path.length)
@@ -170,8 +173,43 @@ def driven(name: str) -> ride.Driven:
     return MADE[name]()
 
 
+def spread(errors: np.ndarray) -> str:
+    """Return median, 95 % and worst of relative errors for print."""
+    size = 100.0 * np.abs(errors)
+    return f"median {100.0 * np.median(errors):+.1f} %, 95 % {np.percentile(size, 95):.1f} %, worst {size.max():.1f} %"
+
+
+@functools.cache
+def constant() -> ride.Log:
+    """Return the drive through the way points at constant speed: a step before each disc the next one is steered at."""
+    return drive_through(ride.visitor(), ride.waypoints())
+
+
 def table() -> str:
     return ride.table({name: driven(name) for name in MADE})
+
+
+def sentences() -> str:
+    """Return what the table does not tell: the way points, and the distance behind the rider."""
+    points, radius = ride.waypoints(), ride.WAYPOINT_RADIUS
+    log, way = driven("passed").log, ride.path_lengths(ride.read_ride())[-1]
+    got = touches(log, CARRIAGE, points, radius)
+    before = (got.touched - got.passed)[:-1]
+    lines = [
+        f"way points passed: {np.count_nonzero(got.nearest <= radius)} of {len(points)} touched; "
+        f"PASSED {before.min():.2f} to {before.max():.2f} s before; nearest at most {got.nearest.max():.2f} m"
+    ]
+    drives = {"passed": log, "stop at each": driven("stop at each").log, "constant speed": constant()}
+    for name, one in drives.items():
+        time = len(one.time) * CARRIAGE.period
+        lines.append(f"{name}: {time:.1f} s, {way / time:.2f} m/s of track, path {true_path(one, CARRIAGE).length[-1]:.0f} m")
+    for radius, log in ((FOLLOW_RADIUS, driven("every fix").log), (ride.FOLLOW_RADIUS, wide_follow())):
+        found = stretches(radius, log)
+        what = f"disc of {radius:g} m, behind the rider against the prediction"
+        lines.append(f"{what} straight behind, {len(found.straight)} steady stretches, {found.seconds} s: {spread(found.straight)}")
+        lines.append(f"{what} to the side: {spread(found.to_the_side)}")
+        lines.append(f"{what} straight behind, each of {len(found.each_second)} steady seconds: {spread(found.each_second)}")
+    return "\n".join(lines)
 
 
 # Way points
@@ -216,12 +254,23 @@ def test_every_wheel_command_is_on_the_grid_of_the_drive():
 
 def test_passing_is_quicker_than_stopping_and_than_constant_speed_and_no_quicker_than_the_way_at_top_speed():
     passing, stopping = (len(driven(name).log.time) for name in ("passed", "stop at each"))
-    constant = len(ride.driven("waypoints").log.time)
     legs = np.hypot(*np.diff(ride.waypoints(), axis=0).T) - 2.0 * ride.WAYPOINT_RADIUS
     assert legs[legs > 0.0].sum() / CARRIAGE.top_speed <= passing * CARRIAGE.period
     assert passing <= 0.3 * stopping
-    assert passing <= 0.4 * constant
+    assert passing <= 0.4 * len(constant().time)
+    assert constant().phase[-1] == Phase.ARRIVED
     assert driven("stop at each").log.phase[-1] == Phase.ARRIVED
+
+
+def test_way_points_are_passed_no_faster_than_the_next_goal_lets_it_stop():
+    """Six legs of 25 m at a time, to rest: at top speed a stop takes 16^2 / (2 * 4) = 32 m. In the last disc it stays."""
+    for i in range(0, 1479, 30):
+        points = ride.waypoints()[i + 1 : i + 7] - ride.waypoints()[i]
+        log = drive_through(follower(5.0), points)
+        got, path = touches(log, CARRIAGE, points, 5.0), true_path(log, CARRIAGE)
+        after = path.time >= got.touched[-1] + FINE_STEP
+        assert log.phase[-1] == Phase.ARRIVED
+        assert np.hypot(path.x - points[-1, 0], path.y - points[-1, 1])[after].max() <= 5.0, i
 
 
 @pytest.mark.parametrize("told", [True, False])
@@ -247,13 +296,21 @@ def test_way_points_not_touched_are_seen():
     assert np.isnan(touches(log, CARRIAGE, points, 1.0).touched).sum() > 20
 
 
+@pytest.mark.xfail(strict=True, reason="a goal within the disc of the way point before counts as the same goal, already passed")
+def test_a_way_point_within_the_disc_of_the_one_before_is_touched_too():
+    along = math.atan2(ride.read_ride().y[1], ride.read_ride().x[1])  # straight ahead of the start
+    ahead, left = np.array([math.cos(along), math.sin(along)]), np.array([-math.sin(along), math.cos(along)])
+    points = np.array([20.0 * ahead, 20.0 * ahead + 4.9 * left, -20.0 * ahead - 10.0 * left])
+    got = touches(drive_through(follower(5.0), points), CARRIAGE, points, 5.0)
+    assert got.nearest.max() <= 5.0
+
+
 def test_passed_too_early_or_too_late_is_seen():
     points = ride.waypoints()[:200]
     early = touches(drive_through(follower(5.0).unchecked(stop_radius=5.5), points), CARRIAGE, points, 5.0)
     assert np.nanmax(early.left) > 0.0 or np.isnan(early.touched).any()
-    late = touches(
-        drive_through(follower(5.0).unchecked(dead_time=0.0, motor_lag=0.0, stop_radius=4.0), points), CARRIAGE, points, 5.0
-    )
+    unaware = follower(5.0).unchecked(dead_time=0.0, motor_lag=0.0, stop_radius=4.0)
+    late = touches(drive_through(unaware, points), CARRIAGE, points, 5.0)
     assert (late.passed > late.touched).any()
 
 
@@ -309,9 +366,10 @@ def test_a_limit_that_is_not_kept_is_seen(name, changes):
 
 
 def test_the_table_tells_of_every_drive():
-    text = table()
+    text = table() + "\n" + sentences()
     print(text)
     assert all(name in text for name in MADE)
+    assert "1486 of 1486 touched" in text
 
 
 # Following
@@ -347,12 +405,12 @@ def behind_kernel(settings, memory, distance, speed, every, settled, steps):
     return area / spans
 
 
-def behind(platform: Platform, radius: float, speed: float, every: float, cycles: float = 300.0) -> float:
-    """Drive behind a goal; return the mean distance (m) over `cycles` tellings, speedings-up or slowings-down, whichever is longest."""
+def behind(platform: Platform, radius: float, speed: float, every: float, cycles: float = 150.0) -> float:
+    """Drive behind a goal; return the mean distance (m) over `cycles` tellings, or changes of speed where those take longer."""
     controller = Controller(platform, capture_radius=radius)
     change = speed / platform.acceleration + speed / platform.braking
     start = 1.5 * following_distance(platform, radius, speed, every)
-    settled = 60.0 * (every + change) + 2.0 * start / (platform.top_speed - speed)
+    settled = 40.0 * (every + change) + 2.0 * start / (platform.top_speed - speed)
     mean = cycles * max(every, change, 0.05 * radius / speed)
     memory = controller.start(0.0).row.copy()
     counts = (int(settled / platform.period), int((settled + mean) / platform.period))
@@ -388,22 +446,33 @@ def test_told_at_every_step_it_is_the_sum_of_radius_stop_and_delay():
             assert following_distance(p, robot.capture_radius, speed) == pytest.approx(expected, rel=1e-9)
 
 
-def test_a_goal_told_now_and_then_is_behind_itself_and_one_hardly_moving_stays_in_the_disc():
-    """Told every so often, it is half that time old in the mean; a very slow one is left within the disc, near its edge."""
-    sooner, later = (following_distance(CARRIAGE, FOLLOW_RADIUS, 0.999, every) for every in (0.1, 0.3))
-    assert later - sooner == pytest.approx(0.999 * 0.1, rel=0.05)
+def test_a_goal_told_now_and_then_is_followed_from_farther_than_its_age_explains():
+    """The speed that can be braked away is concave in the distance, and the robot never faster: so in the mean the distance to the
+    goal told is no less than at every step (Jensen 1906). The goal told is half the time between tellings old, less half a period.
+    """
+    for every in (0.2, 0.5, 1.0, 3.0):
+        for speed in (3.0, 8.0, 15.0):
+            steady = following_distance(CARRIAGE, FOLLOW_RADIUS, speed)
+            got = following_distance(CARRIAGE, FOLLOW_RADIUS, speed, every)
+            assert steady + speed * (every - CARRIAGE.period) / 2.0 * (1.0 - 1e-9) <= got <= steady + 1.5 * speed * every
+
+
+def test_a_goal_that_hardly_moves_is_left_at_the_edge_of_the_disc():
     for every in (0.0, 1.0):
         got = following_distance(CARRIAGE, FOLLOW_RADIUS, 1e-5, every)
-        assert 0.95 * FOLLOW_RADIUS <= got <= 1.0 * FOLLOW_RADIUS + 1e-4
+        assert 0.95 * FOLLOW_RADIUS <= got <= FOLLOW_RADIUS + 1e-4
 
 
 @pytest.mark.parametrize("speed", [16.0, 20.0])
 def test_a_goal_that_outruns_the_robot_is_refused(speed):
-    with pytest.raises(
-        ValueError, match=r"^speed=\d+ m/s must be < 16 m/s, the robot's fastest straight speed, or the goal outruns"
-    ):
+    with pytest.raises(ValueError, match=r"^speed=\d+ m/s must be < 16 m/s, .* or the goal outruns it; slow the goal down"):
         following_distance(CARRIAGE, FOLLOW_RADIUS, speed)
     assert following_distance(CARRIAGE, FOLLOW_RADIUS, 15.99) < math.inf
+
+
+@functools.cache
+def wide_follow() -> ride.Log:
+    return ride.follow(follower(ride.FOLLOW_RADIUS))
 
 
 # The rider followed. A second is *steady* where, over the last STEADY seconds and the next one, the stamps are one second apart,
@@ -469,10 +538,6 @@ def stretches(radius: float, log: ride.Log) -> Stretches:
 def test_in_steady_stretches_the_robot_is_as_far_behind_the_rider_as_predicted():
     got = stretches(FOLLOW_RADIUS, driven("every fix").log)
     size, each = np.abs(got.straight), np.abs(got.each_second)
-    print(f"{len(size)} stretches, {got.seconds} s: median {np.median(got.straight):+.3f}, worst {size.max():.3f}")
-    print(
-        f"{len(each)} s alone: median {np.median(got.each_second):+.3f}, 95 % {np.percentile(each, 95):.3f}, worst {each.max():.3f}"
-    )
     assert len(size) >= 30
     assert got.seconds >= 450
     assert size.max() <= 0.10
@@ -481,8 +546,6 @@ def test_in_steady_stretches_the_robot_is_as_far_behind_the_rider_as_predicted()
 
 def test_with_a_disc_of_20_m_it_follows_to_the_side_and_so_nearer():
     """The radius that constant speed needs: here the robot is up to the disc's edge beside the rider's line after each bend."""
-    log = ride.follow(follower(ride.FOLLOW_RADIUS))
-    got = stretches(ride.FOLLOW_RADIUS, log)
-    print(f"straight {np.median(got.straight):+.3f} {np.abs(got.straight).max():.3f}, side {np.abs(got.to_the_side).max():.3f}")
+    got = stretches(ride.FOLLOW_RADIUS, wide_follow())
     assert np.median(got.straight) < -0.05
     assert np.abs(got.to_the_side).max() <= 0.10

@@ -391,7 +391,7 @@ def test_the_schedule_never_divides_by_zero():
         for error in (0.0, 5e-324, 1e-12, 0.5 * math.pi, math.pi, 3.6):
             for v0, w0 in ((0.0, 0.0), (1.0, 2.0), (1.0, -2.0), (5e-324, 5e-324)):
                 for top in (0.0, 5e-324, 1.0):
-                    limits = (0.0, 0.1, 0.095, top, 2.0, 0.8, 1.2, 5.0, T, T, 0.0, 0.2)
+                    limits = (0.0, 0.1, 0.095, top, 2.0, 0.8, 1.2, 5.0, T, T, 0.0, 0.2, False)
                     got = plain(distance, error, v0, w0, *limits)
                     assert all(math.isfinite(one) for one in got)
                     assert 0.0 <= got[0] <= max(top, 0.0)
@@ -401,3 +401,15 @@ def test_the_schedule_never_divides_by_zero():
 def test_the_truth_of_a_platform_is_what_it_declares():
     assert true_of(cart(**BANDED)) == Truth(0.1, 0.0, 0.05)
     assert dataclasses.replace(cart(**BANDED), wheel_speed_resolution=0.02).slowest_wheel_speed == pytest.approx(0.06)
+
+
+@loops
+@pytest.mark.parametrize("scale", [1.2, 1.5, 2.0])
+def test_whatever_is_wrong_with_the_numbers_it_does_not_circle_for_ever(scale):
+    """Speed too high and turn too slow by as much: past the law's own reserve the robot notices that it circles, and turns first."""
+    platform = cart(turn_rate_limit=1.0, dead_time=0.3)
+    truth = true_of(platform)._replace(speed_scale=scale, turn_scale=1.0 / scale)
+    controller = Controller(platform, capture_radius=0.1)
+    for distance in np.geomspace(0.101, 1.0, 25):
+        got, _ = rough_drive(controller, truth, (distance, 0.0, 0.5 * math.pi), (0.4, 0.5), steps=2500)
+        assert got.rest > 0.0, distance

@@ -37,59 +37,67 @@ def told_kernel(time: float, speed: float, every: float) -> float:
 
 
 @kernel
-def waited_kernel(time: float, place: float, speed: float, every: float, radius: float) -> float:
-    """Return a time (s) up to which the goal, as told, surely stays within `radius` of `place`."""
+def waited_kernel(time: float, leave: float, speed: float, every: float) -> float:
+    """Return a time (s) up to which the goal, as told, surely is not beyond `leave`."""
     if every == 0.0:
-        return (place + radius) / speed
-    return every * max(math.floor((place + radius) / (speed * every)), math.floor(time / every + 1e-9) + 1.0)
+        return leave / speed
+    return every * max(math.floor(leave / (speed * every)), math.floor(time / every + 1e-9) + 1.0)
 
 
 @kernel
-def next_speed_kernel(distance: float, v0: float, within: float, s: Settings) -> tuple[float, float]:
-    """Return the next command and the speed from which the ramps go on, for a goal `distance` straight ahead."""
+def next_speed_kernel(distance: float, v0: float, within: float, rest: float, s: Settings) -> tuple[float, float, bool]:
+    """Return the next command, the speed from which the ramps go on, and whether to stop, for a goal `distance` straight ahead."""
     slowest = slowest_kernel(s.smallest_wheel_speed, s.wheel_speed_step)
     top = min(s.top_speed, s.wheel_speed)
     wanted = 0.0
-    if not stops_kernel(distance, 0.0, v0, 0.0, within, s.capture_radius, s.braking, s.turn_acceleration, s.period, slowest):
+    if not stops_kernel(distance, 0.0, v0, 0.0, within, rest, s.braking, s.turn_acceleration, s.period, slowest):
         wanted = max(slowest, entering_kernel(distance - s.aim_radius, 0.0, SHARE * s.braking, s.period, top))
     v = clip_kernel(wanted, max(0.0, v0 - s.braking * s.period), v0 + s.acceleration * s.period)
     turn = min(s.top_turn_rate, s.wheel_speed / s.half_track)
     v, _, v0, _ = on_grid_kernel(v, 0.0, wanted, 0.0, slowest, s.wheel_speed_step, top, turn, s.wheel_speed, s.half_track)
-    return v, v0
+    return v, v0, wanted == 0.0
 
 
 @kernel
 def mean_behind_kernel(speed: float, every: float, s: Settings, settled: float, end: float) -> float:
     """Return how far the coasted place is behind the goal, mean of the whole cycles between the times `settled` and `end`.
 
-    A cycle begins where the robot starts from rest; where it never rests, where the goal is told.
+    A cycle begins where the robot starts from rest; where it never rests, where the goal is told. At rest it stays until the
+    goal, as told, is beyond `leave`.
     """
-    period, place, v0, k = s.period, -s.aim_radius - held_stop_kernel(speed, SHARE * s.braking, s.period), speed, 0.0
-    area, last, stopping = 0.0, -math.inf, False
-    starts, first_start, last_start, area_first, area_last = 0.0, 0.0, 0.0, 0.0, 0.0
-    told_first, told_last, area_told, area_now = -1.0, 0.0, 0.0, 0.0
+    period, slack, still = s.period, s.stay_radius - s.capture_radius, s.dead_time + 3.0 * s.motor_lag
+    place, v0, k, area = -s.aim_radius - held_stop_kernel(speed, SHARE * s.braking, s.period), speed, 0.0, 0.0
+    last, leave, stopped, stopping = -math.inf, -math.inf, 0.0, False
+    first_start, last_start, area_first, area_last = -1.0, -1.0, 0.0, 0.0
+    first_told, last_told, area_told, area_now = -1.0, -1.0, 0.0, 0.0
     while k * period < end:
         time = k * period
         goal = told_kernel(time, speed, every)
         if time >= settled and goal != last:
-            if told_first < 0.0:
-                told_first, area_told = time, area
-            told_last, area_now = time, area
-        within = s.capture_radius if stopping and goal == last else s.stop_radius
-        v, ramp = next_speed_kernel(goal - place, v0, within, s)
-        if time >= settled and v0 == 0.0 and v > 0.0:
-            if starts == 0.0:
-                first_start, area_first = time, area
-            starts, last_start, area_last = starts + 1.0, time, area
+            if first_told < 0.0:
+                first_told, area_told = time, area
+            last_told, area_now = time, area
+        v, ramp, stop = 0.0, 0.0, True
+        if goal > leave:
+            kept = stopping and goal - last <= slack
+            within, rest = (s.capture_radius, s.capture_radius) if kept else (s.stop_radius, s.rest_radius)
+            v, ramp, stop = next_speed_kernel(goal - place, v0, within, rest, s)
+            if time >= settled and v0 == 0.0 and v > 0.0:
+                if first_start < 0.0:
+                    first_start, area_first = time, area
+                last_start, area_last = time, area
+            stopped = time if v > 0.0 or v0 > 0.0 else stopped
+            if time - stopped >= still and v == 0.0:
+                leave = max(place + s.capture_radius, min(goal, place + s.capture_radius) + slack)
         steps = 1.0
-        if v == 0.0 and v0 == 0.0:
-            steps = max(1.0, math.floor(waited_kernel(time, place, speed, every, s.capture_radius) / period) - 1.0 - k)
+        if goal <= leave:
+            steps = max(1.0, math.floor(waited_kernel(time, leave, speed, every) / period) - 1.0 - k)
         span = steps * period
         area += span * (speed * time - place) + 0.5 * (speed - v) * span * span
-        place, v0, k, last, stopping = place + v * span, ramp, k + steps, goal, v == 0.0
-    if starts > 1.0:
+        place, v0, k, last, stopping = place + v * span, ramp, k + steps, goal, stop
+    if last_start > first_start:
         return (area_last - area_first) / (last_start - first_start)
-    return (area_now - area_told) / (told_last - told_first)
+    return (area_now - area_told) / (last_told - first_told)
 
 
 def following_distance(platform: Platform, capture_radius: float, speed: float, every: float = 0.0) -> float:

@@ -17,12 +17,13 @@ FAST = 1e4  # m/s, rad/s: nor is a motion beyond this
 
 TIME, SPEED, TURN_RATE, X, Y, HEADING, POSE_AGE, BASE_AGE, BASE_SPEED, BASE_TURN_RATE = range(10)
 GOAL_X, GOAL_Y, INTEGRAL, HEADING_BEFORE, PROGRESS, PHASE, GOAL_LOCAL, STAYS = range(10, 18)
-RAMP_SPEED, RAMP_TURN_RATE, SLOWEST, WATCH_X, WATCH_Y, WATCH_HEADING, WATCH_PATH, WATCH_TURN, WATCH_TIME, SILENT = range(18, HEAD)
+RAMP_SPEED, RAMP_TURN_RATE, SLOWEST, WATCH_X, WATCH_Y, WATCH_HEADING, WATCH_PATH, WATCH_TURN, WATCH_TIME, SILENT = range(18, 28)
+TURNED, NEAREST = range(28, HEAD)
 # SPEED, TURN_RATE: the last command as sent. RAMP: the same before it was put on the grid of wheel speeds.
 # BASE is the motion of the wheels, as modelled, BASE_AGE before the last step: no pose in use is older.
 # STAYS: arrived, and to stand still until the goal or the robot is moved.
 # SLOWEST: the smallest wheel speed in use. WATCH: a pose, and the path, turn and time commanded since, without an answer;
-# SILENT: it was noticed.
+# SILENT: it was noticed. TURNED: since the goal came nearer than NEAREST.
 
 
 @kernel
@@ -43,7 +44,7 @@ def sound_kernel(memory: Sequence[float], rows: int) -> bool:
     ages = memory[POSE_AGE] >= 0.0 and 0.0 <= memory[BASE_AGE] <= FAR
     ramp = usable_kernel(memory[RAMP_SPEED], FAST) and usable_kernel(memory[RAMP_TURN_RATE], FAST)
     watch = 0.0 <= memory[SLOWEST] <= FAST and usable_kernel(memory[WATCH_PATH], FAR) and usable_kernel(memory[WATCH_TURN], FAR)
-    watch = watch and 0.0 <= memory[WATCH_TIME] <= FAR
+    watch = watch and 0.0 <= memory[WATCH_TIME] <= FAR and usable_kernel(memory[TURNED], FAR)
     return posed and ramp and watch and motion and base and ages and usable_kernel(memory[INTEGRAL], FAR)
 
 
@@ -71,6 +72,7 @@ def fresh_kernel(
     out[RAMP_TURN_RATE] = w
     out[SLOWEST] = slowest
     out[WATCH_X] = math.nan
+    out[NEAREST] = math.nan
     for i in range(rows):
         out[HEAD + 3 * i] = i * period
         out[HEAD + 3 * i + 1] = v

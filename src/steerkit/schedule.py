@@ -23,10 +23,10 @@ AIM, AIM_NEAR = 0.85, 0.95  # radius of the disc steered at, of the disc where b
 GROWTH = 3.0  # that radius is at most this many times the circle of the top speed, in radians of the goal's width
 SHARE = 0.95  # of braking and turn acceleration is planned with; the rest is for what no plan knows
 TURN_SHARE = 0.85  # of the turning that is left the speed may spoil
-NEAR = 1.25
-BEARING_SHARE = 0.6  # of the fastest turn the bearing of the goal may turn at most, that no error of speeds makes a circle
 LEAD = 0.4  # of the ramp of speed that a turn on the spot may run ahead of
 LEAST_GATE = 0.05  # rad; an error below this never stops the robot
+CIRCLES = 2.5 * math.pi  # rad
+NEARER = 0.9  # of the distance counts as nearer
 TINY = 1e-12
 PI = math.pi
 FREE, TURNING, BRAKING = 0.0, 1.0, 2.0  # what holds the speed down; the step adds its own
@@ -99,11 +99,12 @@ def schedule_kernel(
     settling: float,
     slowest: float,
     half_track: float,
+    on_the_spot: bool,
 ) -> tuple[float, float, float]:
     """Return speed (m/s), turn rate (rad/s) and what holds the speed down, for a goal at `distance`, `error` off the heading.
 
     Braking ends at `target_radius`, at the speed `passing`. `settling` (s, >= period): the last of a turn takes out the error at
-    this time constant. Where the goal is within the disc steered at, both are 0.
+    this time constant. `on_the_spot`: no driving while the goal is off. Where it is within the disc steered at, both are 0.
     """
     b, al = SHARE * braking, SHARE * turn_acceleration
     peak = peak_speed_kernel(distance - target_radius, v0, top, acceleration, braking)
@@ -134,15 +135,27 @@ def schedule_kernel(
     quick = min(turn, max(abs(w0), math.sqrt(al * off)))
     ahead = min(PI, PI / 2.0 + LEAD * quick * max(0.0, peak - v0) / (2.0 * acceleration))
     cap = 0.0
-    if off <= max(LEAST_GATE, ahead - math.atan2(peak / quick, far)):
+    if off <= max(LEAST_GATE, ahead - math.atan2(peak / quick, far)) and not on_the_spot:
         left = turn_time_kernel(off, w0 * side, al, turn) + period
         cap = off * far / (left * 2.0 * TURN_SHARE * math.sin(min(off, PI / 2.0)))
-        if distance < NEAR * target_radius:
-            cap = min(cap, BEARING_SHARE * turn * distance / max(TINY, abs(math.sin(size))))
     if cap < speed:
         speed, why = cap, TURNING
     speed, rate = slow_kernel(speed, rate, off, why == TURNING, slowest, half_track, period, 0.5 * target_radius)
     return speed, side * rate, why
+
+
+@kernel
+def circling_kernel(
+    distance: float, turned: float, nearest: float, rate: float, since: float, other_goal: bool
+) -> tuple[float, float, bool]:
+    """Return what is turned (rad) since the goal came nearer, how near it was (m), and whether the robot circles it.
+
+    Whatever is wrong with the numbers of the robot: who has turned by more than a turn and a quarter, and is no nearer, circles.
+    """
+    if other_goal or not distance >= NEARER * nearest:
+        return 0.0, distance, False
+    turned += rate * since
+    return turned, nearest, abs(turned) > CIRCLES
 
 
 @kernel

@@ -252,7 +252,7 @@ class Memory:
         return f"Memory(time={self.time!r}, command={self.command}, under_way={len(self.under_way)})"
 
 
-HEAD = 28  # floats of a memory row before the commands under way; their places are named in memory_row.py
+HEAD = 30  # floats of a memory row before the commands under way; their places are named in memory_row.py
 
 
 class Decision(NamedTuple):

@@ -40,6 +40,7 @@ from steerkit.memory_row import (
     HEADING,
     HEADING_BEFORE,
     INTEGRAL,
+    NEAREST,
     PHASE,
     POSE_AGE,
     PROGRESS,
@@ -48,6 +49,7 @@ from steerkit.memory_row import (
     SLOWEST,
     STAYS,
     TIME,
+    TURNED,
     X,
     Y,
     fresh_kernel,
@@ -56,7 +58,7 @@ from steerkit.memory_row import (
     usable_kernel,
 )
 from steerkit.prediction import carry_kernel, coast_kernel, motion_then_kernel
-from steerkit.schedule import BRAKING, FREE, passing_kernel, schedule_kernel, stops_kernel
+from steerkit.schedule import BRAKING, FREE, circling_kernel, passing_kernel, schedule_kernel, stops_kernel
 from steerkit.signals import HEAD, Causes, Phase, Slowing
 from steerkit.wheel_grid import on_grid_kernel, slowest_kernel
 
@@ -118,6 +120,7 @@ def scheduled_kernel(
     way_point: bool,
     turned: float,
     next_distance: float,
+    on_the_spot: bool,
 ) -> tuple[float, float, float, bool]:
     """Return speed, turn rate, what slows, and whether to stop, by the schedule."""
     capture_radius, stop_radius, target_radius = settings[13], settings[15], settings[16]
@@ -150,6 +153,7 @@ def scheduled_kernel(
         settling,
         slowest,
         half_track,
+        on_the_spot,
     )
     return v, w, why, v == 0.0 and w == 0.0
 
@@ -259,7 +263,7 @@ def step_kernel(settings: Sequence[float], memory: Sequence[float], measured: Se
     integral, before, progress, why = 0.0, nan, PASSED if passed else ON_THE_WAY, FREE
     asked, wanted_v, wanted_w, stopping = 0.0, 0.0, 0.0, True
     then_x, then_y, then_heading = nan, nan, nan
-    settled = rest_radius
+    settled, turned, nearest = rest_radius, 0.0, nan
     if not held:
         then_x, then_y, then_heading, v, w = carry_kernel(
             memory, HEAD, rows, since, last_v, last_w, dead_time, lag, 0.0, dead_time, now_x, now_y, now_heading, v, w
@@ -276,6 +280,9 @@ def step_kernel(settings: Sequence[float], memory: Sequence[float], measured: Se
             turning_to = turning_on_kernel(error, last_w, 6.0 * (settings[12] + settings[11] / max(distance, capture_radius)))
             if went == STOPPING:
                 settled = capture_radius
+            turned, nearest, circles = circling_kernel(
+                away, memory[TURNED], memory[NEAREST], last_w, since, jumped or progress == PASSED or not same_place
+            )
             next_away, next_bearing = bearing_kernel(goal_x, goal_y, next_x, next_y)
             wanted_v, wanted_w, why, stopping = scheduled_kernel(
                 settings,
@@ -290,7 +297,10 @@ def step_kernel(settings: Sequence[float], memory: Sequence[float], measured: Se
                 way_point,
                 difference_kernel(next_bearing, bearing) if way_point else 0.0,
                 next_away,
+                circles,
             )
+            if wanted_w == 0.0 and wanted_v > 0.0:
+                turned = 0.0
             if stays:
                 wanted_v, wanted_w, stopping = 0.0, 0.0, True
             if progress != PASSED:
@@ -371,7 +381,7 @@ def step_kernel(settings: Sequence[float], memory: Sequence[float], measured: Se
         out[GOAL_X], out[GOAL_Y], out[GOAL_LOCAL] = (nan, nan, 1.0) if local else (given_x, given_y, 0.0)
     else:
         out[GOAL_X], out[GOAL_Y], out[GOAL_LOCAL] = memory[GOAL_X], memory[GOAL_Y], memory[GOAL_LOCAL]
-    out[INTEGRAL], out[HEADING_BEFORE] = integral, before
+    out[INTEGRAL], out[HEADING_BEFORE], out[TURNED], out[NEAREST] = integral, before, clip_kernel(turned, -FAR, FAR), nearest
     out[PROGRESS], out[PHASE], out[STAYS] = progress, float(phase), 1.0 if stays else 0.0
 
     slowed = slowed_kernel(v1, wanted_v, why, bound, top, most, held or phase == ARRIVED or stopping)
