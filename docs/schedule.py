@@ -23,7 +23,6 @@ sys.path.insert(0, str(HERE.parent / "tests"))
 
 import schedule_studies as studies  # noqa: E402 the tests are no package
 from rough_loop import rough_drive, true_of  # noqa: E402
-
 from steerkit import Controller  # noqa: E402
 
 FAR, NEAR, PATH, DISC = "#0072b2", "#d55e00", "#0072b2", "#f0d9b5"  # Okabe & Ito 2008, from memory; the last a light tint
@@ -39,15 +38,17 @@ def histogram(rows: dict[str, np.ndarray]) -> None:
     """Draw the share of drives by their time over the bound, the 99th percentile marked."""
     figure, axes = plt.subplots(figsize=(12, 6.2), dpi=100)
     edges = np.linspace(1.0, 1.6, 121)
-    for (name, (_, _, colour)), height in zip(CASES.items(), (0.62, 0.3), strict=True):
+    for (name, (_, _, colour)), height in zip(CASES.items(), (0.93, 0.86), strict=True):
         ratio = ratios(rows[name])
         share = np.histogram(np.minimum(ratio, edges[-1] - 1e-9), edges)[0] / len(ratio)
         axes.stairs(100.0 * share, edges, color=colour, linewidth=1.8, fill=False)
         middle, most = np.percentile(ratio, [50, 99])
         axes.axvline(most, color=colour, linewidth=1.0, linestyle=(0, (4, 3)))
-        text = f"{name}: half within {middle - 1.0:.1%} of the bound, 99 % within {most - 1.0:.0%} (dashed)"
-        axes.text(1.13, height, text, color=colour, fontsize=12, transform=axes.get_xaxis_transform())
+        text = f"{name}: half within {100.0 * (middle - 1.0):.1f} % of the bound, 99 % within {100.0 * (most - 1.0):.0f} % (dashed)"
+        axes.text(1.59, height, text, color=colour, fontsize=12, ha="right", transform=axes.get_xaxis_transform(), zorder=5)
     axes.set_yscale("log")
+    axes.set_ylim(5e-3, 300.0)
+    axes.set_yticks([0.01, 0.1, 1.0, 10.0], ["0.01", "0.1", "1", "10"])
     axes.set_xlim(1.0, 1.6)
     axes.set_xlabel("time to rest over a lower bound that no robot with these limits can beat (last bar: 1.6 and more)")
     axes.set_ylabel("drives per bar, % (log)")
@@ -64,7 +65,7 @@ def ratios(rows: np.ndarray) -> np.ndarray:
 
 
 def slowest(rows: np.ndarray, count: int = 10) -> list[int]:
-    """Return the numbers of the drives farthest above their bound, by what they lost (s) over the bound plus two periods' rounding."""
+    """Return the numbers of the drives farthest above their bound, as a ratio."""
     r = studies.Row(*rows.T)
     with np.errstate(divide="ignore", invalid="ignore"):
         over = np.where((r.bound > 0) & (r.arrived > 0), r.time / r.bound, 0.0)
@@ -97,7 +98,7 @@ def ten_slowest(rows: np.ndarray, seed: int, distance: float) -> None:
         periods = row.bound / p.period
         axes.set_title(
             f"{row.time:.2f} s, bound {row.bound:.2f} s ({periods:.0f} periods)\n"
-            f"d {row.distance / row.radius:.2f} r, {run.motion[0]:.2f} m/s, {run.motion[1]:+.1f} rad/s of {p.turn_acceleration:.1f} rad/s²",
+            f"d {row.distance / row.radius:.2f} r, {run.motion[0]:.2f} m/s, {run.motion[1]:+.1f} rad/s",
             fontsize=8,
             loc="left",
         )

@@ -22,6 +22,7 @@ import pytest
 
 import test_ride as ride
 from robots import draw
+from schedule_studies import common_draw
 from steerkit import Causes, Controller, Phase, Platform, compiled
 from steerkit.compiled import kernel
 from steerkit.following import following_distance
@@ -202,7 +203,8 @@ def sentences() -> str:
     drives = {"passed": log, "stop at each": driven("stop at each").log, "constant speed": constant()}
     for name, one in drives.items():
         time = len(one.time) * CARRIAGE.period
-        lines.append(f"{name}: {time:.1f} s, {way / time:.2f} m/s of track, path {true_path(one, CARRIAGE).length[-1]:.0f} m")
+        path = np.hypot(np.diff(one.x), np.diff(one.y)).sum()
+        lines.append(f"{name}: {time:.1f} s, {way / time:.2f} m/s of track, path {path:.0f} m")
     for radius, log in ((FOLLOW_RADIUS, driven("every fix").log), (ride.FOLLOW_RADIUS, wide_follow())):
         found = stretches(radius, log)
         what = f"disc of {radius:g} m, behind the rider against the prediction"
@@ -379,7 +381,8 @@ def test_the_table_tells_of_every_drive():
 def behind_kernel(settings, memory, distance, speed, every, settled, steps):
     """Return the mean distance (m) behind a goal that moves along x at `speed`, after `settled` steps; NaN where the robot turned.
 
-    Wheels with dead time and lag, exact: path = command * time + lag * (speed before - speed after).
+    Wheels with dead time and lag, exact: path = command * time + lag * (speed before - speed after). The mean is weighted by a
+    raised cosine, so that it does not matter where in a cycle it begins and ends (von Hann's window, from memory).
     """
     period, dead_time, lag, nan = settings[0], settings[1], settings[2], math.nan
     d = math.floor(dead_time / period + 1e-12)
@@ -401,16 +404,17 @@ def behind_kernel(settings, memory, distance, speed, every, settled, steps):
             v1 = told + (v - told) * left
             x, v, time = x + told * span + lag * (v - v1), v1, time + span
             if k >= settled:
-                area, spans = area + 0.5 * (before + speed * time - x) * span, spans + span
+                weight = (1.0 - math.cos(2.0 * math.pi * (k - settled) / (steps - settled))) * span
+                area, spans = area + 0.5 * (before + speed * time - x) * weight, spans + weight
     return area / spans
 
 
-def behind(platform: Platform, radius: float, speed: float, every: float, cycles: float = 150.0) -> float:
+def behind(platform: Platform, radius: float, speed: float, every: float, cycles: float = 50.0) -> float:
     """Drive behind a goal; return the mean distance (m) over `cycles` tellings, or changes of speed where those take longer."""
     controller = Controller(platform, capture_radius=radius)
     change = speed / platform.acceleration + speed / platform.braking
     start = 1.5 * following_distance(platform, radius, speed, every)
-    settled = 40.0 * (every + change) + 2.0 * start / (platform.top_speed - speed)
+    settled = 20.0 * (every + change) + 2.0 * start / (platform.top_speed - speed)
     mean = cycles * max(every, change, 0.05 * radius / speed)
     memory = controller.start(0.0).row.copy()
     counts = (int(settled / platform.period), int((settled + mean) / platform.period))
@@ -431,6 +435,26 @@ def test_the_distance_behind_a_steady_goal_is_the_one_predicted():
     print(f"median {np.median(size):.1e}, 95 % {np.percentile(size, 95):.1e}, worst {size.max():.1e}")
     assert size.max() <= 0.02
     assert np.median(size) <= 1e-3
+
+
+@pytest.mark.skipif(not compiled.ON, reason="closed loops over many robots want the compiler")
+def test_the_distance_behind_is_predicted_with_a_wheel_grid_and_with_noise_told_too():
+    """Robots of `schedule_studies`, half with a dead band and a resolution, half with position noise told, which is not there.
+
+    A robot told of noise starts and stops by wider margins; when its wheels count as at rest is not predicted to the period.
+    """
+    errors = []
+    for i in range(60):
+        rng = np.random.default_rng([305, i])
+        run = common_draw(rng, 10.0, lag=True, band=bool(i % 2))
+        platform = run.platform if i % 2 else replace(run.platform, position_noise=rng.uniform(0.0, run.capture_radius / 8.0))
+        speed, every = rng.uniform(0.05, 0.95) * platform.top_speed, (0.0 if i % 4 < 2 else rng.uniform(0.1, 2.0))
+        expected = following_distance(platform, run.capture_radius, speed, every)
+        errors.append(behind(platform, run.capture_radius, speed, every) / expected - 1.0)
+    size = np.abs(errors)
+    print(f"median {np.median(size):.1e}, 95 % {np.percentile(size, 95):.1e}, worst {size.max():.1e}")
+    assert np.percentile(size, 95) <= 0.02
+    assert size.max() <= 0.05
 
 
 def test_told_at_every_step_it_is_the_sum_of_radius_stop_and_delay():
