@@ -1238,7 +1238,8 @@ def test_way_points_on_a_straight_line_cost_no_time():
 
 
 def test_round_is_driven_without_a_stop():
-    decisions, _, _ = passing(ROUND)
+    decisions, _, end = passing(ROUND)
+    assert math.dist(end[:2], ROUND[-1]) <= names_of(10).controller.capture_radius
     speeds = np.array([decision.command.speed for decision in decisions])
     running = np.flatnonzero(speeds > 0.4)
     assert speeds[running[0] : running[-1]].min() > 0.4  # of 0.5 m/s: between start and end it never slows for a way point

@@ -409,12 +409,12 @@ def behind_kernel(settings, memory, distance, speed, every, settled, steps):
     return area / spans
 
 
-def behind(platform: Platform, radius: float, speed: float, every: float, cycles: float = 50.0) -> float:
+def behind(platform: Platform, radius: float, speed: float, every: float, cycles: float = 150.0) -> float:
     """Drive behind a goal; return the mean distance (m) over `cycles` tellings, or changes of speed where those take longer."""
     controller = Controller(platform, capture_radius=radius)
     change = speed / platform.acceleration + speed / platform.braking
-    start = 1.5 * following_distance(platform, radius, speed, every)
-    settled = 20.0 * (every + change) + 2.0 * start / (platform.top_speed - speed)
+    start = 1.2 * following_distance(platform, radius, speed, every)
+    settled = 20.0 * (every + change) + 0.4 * start / (platform.top_speed - speed)
     mean = cycles * max(every, change, 0.05 * radius / speed)
     memory = controller.start(0.0).row.copy()
     counts = (int(settled / platform.period), int((settled + mean) / platform.period))

@@ -406,7 +406,7 @@ def test_the_truth_of_a_platform_is_what_it_declares():
 @loops
 @pytest.mark.parametrize("scale", [1.2, 1.5, 2.0])
 def test_whatever_is_wrong_with_the_numbers_it_does_not_circle_for_ever(scale):
-    """Speed too high and turn too slow by as much: past the law's own reserve the robot notices that it circles, and turns first."""
+    """Speed too high and turn too slow by as much: past the law's own reserve the robot notices and turns first."""
     platform = cart(turn_rate_limit=1.0, dead_time=0.3)
     truth = true_of(platform)._replace(speed_scale=scale, turn_scale=1.0 / scale)
     controller = Controller(platform, capture_radius=0.1)

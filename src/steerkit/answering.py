@@ -2,9 +2,9 @@
 
 Wheels told to run below their smallest speed stand still, and a smallest speed that was declared too low leaves the robot standing.
 From the pose at which the wheels were last seen to answer, the path and the turn that the robot should have made since are added
-up; where there is much of them and the pose has stayed within its noise, the smallest speed in use is raised by a tenth, and so on
-until the robot moves. A robot that stands for another reason (blocked, motors off) is told of in the same way; its smallest speed
-is not raised beyond `most`. Metres, seconds, radians. Derived; the number of periods and the tenth were chosen.
+up; where there is much of them and the pose has stayed within its noise, the smallest speed in use is raised by a tenth, at least to
+what was told, and so on until the robot moves. A robot that stands for another reason (blocked, motors off) is told of in the same
+way; its smallest speed is not raised beyond `most`. Metres, seconds, radians. Derived; number of periods and tenth were chosen.
 """
 
 from __future__ import annotations
@@ -61,8 +61,8 @@ def watch_kernel(
             at_x, at_y, at_heading, path, turn, time, silent = x, y, heading, 0.0, 0.0, 0.0, 0.0
         elif time > patience and due > max(2.0 * BLUR * blur, 0.5 * patience * slowest):
             path, turn, time, silent = 0.0, 0.0, 0.0, 1.0
-            if told <= 2.0 * slowest or slowest == 0.0:
-                slowest = min(max(RAISE * slowest, FIRST * top), max(most, slowest))
+            if told <= max(most, slowest):  # else no dead band is as wide
+                slowest = min(max(RAISE * slowest, FIRST * top, told), max(most, slowest))
     out[SLOWEST], out[SILENT], out[WATCH_PATH], out[WATCH_TURN], out[WATCH_TIME] = slowest, silent, path, turn, time
     out[WATCH_X], out[WATCH_Y], out[WATCH_HEADING] = at_x, at_y, at_heading
     return silent != 0.0

@@ -104,7 +104,7 @@ def following_distance(platform: Platform, capture_radius: float, speed: float, 
     """Return how far behind a goal that moves straight on at constant speed the robot settles, its goal the latest place told.
 
     Straight behind it, by the speed schedule. Less, by up to the capture radius, where it follows to the side of the goal's line,
-    as after a bend: it steers no closer to a goal than into the disc. Noise counts only by the room it takes from the disc.
+    as after a bend: it steers no closer to a goal than into the disc. Noise counts by the room that it takes from the disc.
 
     Parameters
     ----------
