@@ -1,26 +1,54 @@
 """The proof that step.c does the work of the compiled step: the same numbers on random drives with faults in them.
 
-Random robots of the tests, some of their settings drawn anew, are driven to goals by the compiled kernel under dead time, lag and
-noise, with everything that a measurement or a stored memory can have wrong with it. At each step C starts from the same memory.
+Random robots of the tests, three in four with a dead band or a grid of wheel speeds, some of their settings drawn anew, are driven
+to goals and through way points by the compiled kernel, by either law, under dead time, lag and noise, with everything that a
+measurement or a stored memory can have wrong with it; some do not answer. At each step C starts from the same memory. What was
+met is counted, the branches of step.c too: an equality says nothing of a branch that was never entered.
 """
 
 from __future__ import annotations
 
 import ctypes
+import dataclasses
 import math
 import shutil
 import subprocess
 import sys
+from collections import Counter
+from collections.abc import Iterator
 from pathlib import Path
 from typing import Any, NamedTuple
 
 import numpy as np
 
-from steerkit import Controller
+from steerkit import (
+    Causes,
+    Controller,
+    Phase,
+    Slowing,
+    angles,
+    answering,
+    approach,
+    heading,
+    intake,
+    limits,
+    memory_row,
+    prediction,
+    schedule,
+    step,
+    wheel_grid,
+)
+from steerkit.answering import watch_kernel
+from steerkit.controller import InPlace
+from steerkit.intake import BELIEVED, MEASURED
 from steerkit.kinematics import arc_kernel, to_robot_kernel
-from steerkit.limits import limit_kernel
+from steerkit.limits import limit_kernel, turn_first_kernel
+from steerkit.memory_row import HEAD, SILENT, SLOWEST, TIME, WATCH_HEADING, WATCH_TIME, WATCH_X
 from steerkit.prediction import stop_end_kernel
-from steerkit.step import BELIEVED, HEAD, RESULT, TIME, step_kernel
+from steerkit.schedule import cut_stop_kernel, schedule_kernel, stops_kernel
+from steerkit.settings import Settings
+from steerkit.step import RESULT, step_kernel
+from steerkit.wheel_grid import on_grid_kernel
 
 sys.path.insert(0, str(Path(__file__).resolve().parent.parent / "tests"))
 import robots
@@ -32,17 +60,46 @@ SEED = 20240611
 Array = np.ndarray[Any, np.dtype[np.float64]]
 
 
+MODULES = (angles, answering, approach, heading, intake, limits, prediction, schedule, step, wheel_grid)
+
+
+def constants() -> dict[str, float]:
+    """Return what step.c takes from Python: the places in its rows, the codes, and the constants of each module."""
+    found: dict[str, float] = {"MEASURED": MEASURED, "RESULT": RESULT} | plain_constants(memory_row, "")
+    for module in MODULES:
+        found |= plain_constants(module, module.__name__.rpartition(".")[2].upper() + "_")
+    for prefix, names in (("S_", Settings._fields), ("M_", InPlace.MEASURED)):
+        found |= {prefix + name.upper(): place for place, name in enumerate(names)}
+    for prefix, codes in (("PHASE_", Phase), ("SLOWING_", Slowing), ("", Causes)):
+        found |= {prefix + code.name: int(code) for code in codes}
+    return found
+
+
+def plain_constants(module: Any, prefix: str) -> dict[str, float]:
+    numbers = {name: value for name, value in vars(module).items() if name.isupper() and isinstance(value, (int, float))}
+    return {prefix + name: value for name, value in numbers.items() if not isinstance(value, bool) and math.isfinite(value)}
+
+
+def in_c(number: float) -> str:
+    """Return a number as C reads it, to the bit."""
+    return str(number) if isinstance(number, int) else f"({number.hex()})"
+
+
 def build(folder: Path) -> tuple[Path | None, str]:
-    """Compile step.c into `folder`; return the library and the compiler, or None and why there is none."""
+    """Compile step.c into `folder`; return the library and the compiler, or None and why there is none.
+
+    Beside it one that counts the branches that it enters, `counting.so`: for the proof, not for timing.
+    """
     found = next((path for path in map(shutil.which, ("cc", "gcc", "clang")) if path), None)
     if found is None:
         return None, "no C compiler (cc, gcc, clang) on this machine"
-    target = folder / "step.so"
-    command = [found, *FLAGS, "-shared", "-fPIC", "-o", str(target), str(Path(__file__).with_name("step.c")), "-lm"]
-    done = subprocess.run(command, capture_output=True, text=True)
-    if done.returncode:
-        return None, "the C compiler failed: " + (done.stderr.strip().splitlines() or ["no reason given"])[0]
-    return target, subprocess.run([found, "--version"], capture_output=True, text=True).stdout.splitlines()[0]
+    (folder / "numbers.h").write_text("".join(f"#define {name} {in_c(value)}\n" for name, value in constants().items()))
+    command = [found, *FLAGS, "-shared", "-fPIC", f"-I{folder}", str(Path(__file__).with_name("step.c")), "-lm", "-o"]
+    for more in ([str(folder / "counting.so"), "-DCOUNTING"], [str(folder / "step.so")]):
+        done = subprocess.run(command + more, capture_output=True, text=True)
+        if done.returncode:
+            return None, "the C compiler failed: " + (done.stderr.strip().splitlines() or ["no reason given"])[0]
+    return folder / "step.so", subprocess.run([found, "--version"], capture_output=True, text=True).stdout.splitlines()[0]
 
 
 def address(array: Array) -> ctypes.c_void_p:
@@ -71,22 +128,29 @@ class Cart:
 
 
 def plain_row(at: float, pose: tuple[float, float, float], goal: tuple[float, float]) -> list[float]:
-    """Return the fifteen numbers of a measurement of pose and goal, and of nothing else."""
-    return [at, *pose, math.nan, *goal, 0.0, math.nan, math.nan, math.nan, 0.0, math.nan, math.nan, 0.0]
+    """Return the numbers of a measurement of pose and goal, and of nothing else."""
+    return [at, *pose, math.nan, *goal, 0.0, math.nan, math.nan, math.nan, 0.0, math.nan, math.nan, math.nan, math.nan, 0.0]
 
 
 def random_robot(rng: np.random.Generator) -> robots.Robot:
-    """Return a random robot of the tests; one in a hundred thousand has a lag too short for a platform, and is drawn again."""
-    try:
-        return robots.draw(rng)
-    except ValueError:
-        return robots.draw(rng)
+    """Return a random robot of the tests, three in four with a dead band, a grid of wheel speeds or both, from faint to coarse."""
+    robot = robots.draw(rng)
+    p = robot.platform
+    most = 0.9 * min(p.top_speed, p.top_turn_rate * p.track_width / 2.0, 0.8 * robot.capture_radius / p.period)
+    smallest, step = rng.choice((0.0, 0.0, 1.0, 1.0), 2) * 10.0 ** rng.uniform(-3.0, 0.0, 2) * most
+    step = min(step, most - smallest)
+    platform = dataclasses.replace(p, smallest_wheel_speed=smallest, wheel_speed_resolution=step)
+    return robot._replace(platform=platform)
 
 
 def random_controller(rng: np.random.Generator) -> tuple[Controller, tuple[float, float, float]]:
-    """Return a controller of a random robot of the tests, some of its settings drawn anew and unchecked, and a start pose."""
-    robot = random_robot(rng)
-    controller = Controller(robot.platform, capture_radius=robot.capture_radius)
+    """Return a controller of a random robot, by either law, some of its settings drawn anew and unchecked, and a start pose."""
+    try:
+        robot = random_robot(rng)
+        constant = bool(rng.random() < 0.4)
+        controller = Controller(robot.platform, capture_radius=robot.capture_radius, constant_speed=constant)
+    except ValueError:  # one in thirty, mostly a constant speed within the dead band; drawn again
+        return random_controller(rng)
     changes = {
         "reverse_speed": rng.uniform(0.0, 0.5),
         "top_turn_rate": rng.uniform(0.2, 2.0),
@@ -98,18 +162,25 @@ def random_controller(rng: np.random.Generator) -> tuple[Controller, tuple[float
         "stay_radius": rng.uniform(1.0, 1.5) * robot.capture_radius,
         "rest_radius": rng.uniform(0.5, 1.0) * robot.capture_radius,
         "stop_radius": rng.uniform(0.0, robot.capture_radius),
+        "aim_radius": rng.uniform(0.1, 1.0) * robot.capture_radius,
         "ceiling": rng.uniform(0.5, 10.0),
         "gain": rng.uniform(0.5, 20.0),
         "integral_time": 10.0 ** rng.uniform(-0.5, 1.0),
         "derivative_time": rng.uniform(0.0, 0.1),
         "predict": 0.0,
+        "settling": rng.uniform(1.0, 5.0) * robot.platform.period,
+        "most_raised": rng.uniform(0.0, 0.5),
     }
-    drawn = {name: value for name, value in changes.items() if rng.random() < 0.25}
+    share = rng.choice((0.0, 0.25))
+    drawn = {name: value for name, value in changes.items() if rng.random() < share}
     return controller.unchecked(**drawn), robots.draw_start(rng, robot)
 
 
 class World:
-    """What a controller is told during a random drive: its cart, a goal that moves now and then, and faults, rarely or often."""
+    """What a controller is told during a random drive: its cart, a goal that moves now and then, faults, rarely or often.
+
+    Some tour through way points. Some carts do not answer: their wheels stand still below a speed that nobody declared, or at any.
+    """
 
     def __init__(self, rng: np.random.Generator, controller: Controller, pose: tuple[float, float, float]) -> None:
         self.rng, self.settings = rng, controller.settings
@@ -118,10 +189,13 @@ class World:
         self.restless = rng.choice((0.03, 0.3))  # how often the goal moves
         self.tick = rng.choice((1.0, 1.0, 0.3))  # how fast the clock goes
         self.spread = rng.choice((3.0, 0.3, self.settings.capture_radius, 0.0))  # from robot to goal; 0: goal at the origin
+        self.touring = rng.random() < 0.4  # through way points
+        self.deaf = rng.choice((0.0, 0.0, rng.uniform(0.0, 0.2), math.inf))  # m/s; wheels slower than this stand still
         motion = self.any_motion() if rng.random() < 0.5 else (0.0, 0.0)
         self.cart, self.time, self.goal = Cart(controller, pose, motion), 0.0, (0.0, 0.0)
-        self.memory = controller.start(0.0, motion).row
+        self.memory, self.next_goal = controller.start(0.0, motion).row, (0.0, 0.0)
         self.move_goal()
+        self.move_next_goal()
 
     def any_motion(self) -> tuple[float, float]:
         """Return a motion to begin with, slowed to one that the wheels are believed to have."""
@@ -137,6 +211,18 @@ class World:
         elif self.spread:
             self.goal = x + self.rng.normal(0.0, self.spread), y + self.rng.normal(0.0, self.spread)
 
+    def move_next_goal(self) -> None:
+        self.next_goal = tuple(self.rng.normal(self.goal, 2.0 * self.spread + self.settings.capture_radius))
+
+    def answer(self, phase: float, command: tuple[float, float]) -> None:
+        """Drive the cart as commanded, if it answers; give the next goal where the way point is passed, sooner or later."""
+        v, w = command
+        wheel = abs(v) + abs(w) * self.settings.half_track
+        self.cart.drive(command if wheel >= self.deaf else (0.0, 0.0))
+        if phase == Phase.PASSED and self.rng.random() < 0.5:
+            self.goal = self.next_goal
+            self.move_next_goal()
+
     def rarely(self, share: float) -> bool:
         return bool(self.rng.random() < share * self.faults)
 
@@ -149,12 +235,16 @@ class World:
         if self.rarely(0.02):
             self.memory = self.memory.copy()
             place = rng.integers(HEAD if rng.random() < 0.8 else len(self.memory))
-            self.memory[place] = rng.choice((math.nan, math.inf, 1e13, 2e4, 5.0, -3.0, 1.0, 0.0))
+            self.memory[place] = rng.choice((math.nan, math.inf, 1e13, 2e4, 5.0, -3.0, 3.0, 2.0, 1.0, 0.0))
         return tuple(map(float, self.spoiled(plain_row(self.time, self.cart.pose, self.goal))))
 
     def spoiled(self, row: list[float]) -> list[float]:
         """Return a measurement as the world gives it: late, noisy, seen by a camera, sometimes missing or plainly wrong."""
         rng, s = self.rng, self.settings
+        if self.touring and rng.random() < 0.95:
+            row[14:16] = self.next_goal
+            if self.camera:
+                row[14:16] = to_robot_kernel(row[1], row[2], row[3], *self.next_goal)
         if self.camera:
             row[5:8] = *to_robot_kernel(row[1], row[2], row[3], row[5], row[6]), 1.0
         row[1:3] = np.add(row[1:3], rng.normal(0.0, 3.0 * s.position_noise, 2))
@@ -166,7 +256,7 @@ class World:
         if self.rarely(0.2):
             row[8], row[9] = rng.normal(0.0, rng.choice((0.3, 0.01)), 2) if rng.random() < 0.9 else (1e5, math.inf)
         if self.rarely(0.2):
-            row[10] = rng.uniform(-0.1, 0.5)
+            row[10] = rng.uniform(-0.1, 0.5) * rng.choice((1.0, 0.1))
         if self.rarely(0.05):
             row[12], row[13] = rng.normal(0.0, 0.5, 2) if rng.random() < 0.8 else (0.1, math.nan)
         for share, place, values in (
@@ -176,7 +266,8 @@ class World:
             (0.01, 7, (2.0, math.nan)),
             (0.03, 0, (math.nan, row[0] - 1.0, row[0] + 0.4 * s.period, self.memory[TIME] + 5e-7, row[0] + 100.0)),
             (0.04, 11, (1.0, math.nan)),
-            (0.02, 14, (1.0,)),
+            (0.02, 15, (math.nan, 1e13, row[15] + rng.normal())),
+            (0.02, 16, (1.0,)),
         ):
             if self.rarely(share):
                 row[place] = rng.choice(values)
@@ -184,42 +275,88 @@ class World:
 
 
 class Proof(NamedTuple):
-    """What the proof saw: steps, the share of them with all bits equal, the largest difference, phases and causes met."""
+    """What the proof saw: steps, the share of them with all bits equal, the largest difference, how often it met each thing."""
 
     steps: int
     equal: float
     largest: float
-    phases: int
-    causes: int
+    met: dict[str, Counter[str]]  # phases, causes, what slowed, branches
 
 
-def prove_parts(library: ctypes.CDLL, rng: np.random.Generator) -> None:
-    """Compare two parts alone: of where a stop ends, a step sees only on which side of a circle; and it never wants to go back."""
-    for _ in range(1000):
-        stop = np.concatenate([rng.normal(0.0, 2.0, 5), rng.uniform(0.1, 2.0, 3)])
-        x, y, heading, v, w, braking, turn_acceleration, path = stop.tolist()
-        end = stop_end_kernel(x, y, heading, v, w, braking, turn_acceleration, path)
-        prove_part(library.stop_end_alone, stop, end)
-        motions = np.concatenate([rng.normal(0.0, 1.0, 4), rng.uniform(0.1, 2.0, 5), rng.uniform(0.05, 0.5, 3)])
-        motions[[0, 2, 3, 5]] *= rng.random(4) < 0.7  # at rest, a stop, straight on, forward only
-        prove_part(library.limit_alone, motions, limit_kernel(*motions.tolist()))
+def parts(rng: np.random.Generator) -> Iterator[tuple[str, Any, Array]]:
+    """Yield parts to compare alone, their kernels, and numbers for them that a step seldom gives.
+
+    Of the end of a stop, a step sees only on which side of a circle it is; it never wants to go back, and seldom raises a speed.
+    """
+    yield "stop_end_alone", stop_end_kernel, np.concatenate([rng.normal(0.0, 2.0, 5), rng.uniform(0.1, 2.0, 3)])
+    motions = np.concatenate([rng.normal(0.0, 1.0, 4), rng.uniform(0.1, 2.0, 5), rng.uniform(0.05, 0.5, 3)])
+    motions[[0, 2, 3, 5]] *= rng.random(4) < 0.7  # at rest, a stop, straight on, forward only
+    yield "limit_alone", limit_kernel, motions
+    yield "turn_first_alone", turn_first_kernel, np.delete(motions, 5)
+    radius = 10.0 ** rng.uniform(-2.0, 1.0)
+    task = [rng.uniform(0.1, 5.0) * radius, rng.uniform(-4.0, 4.0), *rng.normal(0.0, 1.0, 2), rng.uniform(-0.5, 0.5), radius]
+    robot = [rng.uniform(0.1, 1.0) * radius, *rng.uniform(0.1, 2.0, 5), *rng.uniform(0.01, 0.5, 4)]
+    drive = np.array(task + robot)
+    drive[0] *= rng.choice((0.0, 1e-13, 1.0), p=(0.05, 0.05, 0.9))  # at the goal, or all but
+    drive[7] *= rng.random() < 0.9  # told to stand
+    yield "schedule_alone", scheduled, np.append(drive, rng.random() < 0.2)
+    stop = np.concatenate([rng.uniform(0.0, 2.0, 1), rng.normal(0.0, 1.0, 3), rng.uniform(0.1, 1.0, 4), rng.uniform(0.01, 0.5, 2)])
+    yield "stops_alone", stops_kernel, stop
+    yield "cut_stop_alone", cut_stop_kernel, stop[[0, 6, 8, 9]]
+    wheels = np.concatenate([rng.normal(0.0, 0.4, 4), rng.uniform(0.01, 0.5, 2), rng.uniform(0.05, 1.0, 4)])
+    wheels[[0, 2, 3, 5]] *= rng.random(4) < 0.7  # at rest, a turn on the spot, straight on, any speed
+    if rng.random() < 0.3:  # on the grid already
+        left, right = wheels[5] * rng.integers(-5, 6, 2)
+        wheels[:2] = 0.5 * (left + right), (right - left) / (2.0 * wheels[9])
+    yield "on_grid_alone", on_grid_kernel, wheels
+    memory = rng.normal(0.0, 0.3, HEAD)
+    memory[[SLOWEST, WATCH_TIME, SILENT]] = rng.uniform(0.0, 0.2), rng.uniform(0.0, 2.0), rng.integers(2)
+    pose = memory[WATCH_X : WATCH_HEADING + 1] + rng.normal(0.0, rng.choice((0.02, 0.3)), 3)
+    seen = [*rng.normal(0.0, 0.3, 2), *rng.uniform(0.0, 0.05, 2), *rng.uniform(0.1, 1.0, 3), rng.uniform(0.0, 0.3)]
+    yield "watch_alone", watched, np.concatenate([memory, [1.0], pose, seen])
 
 
-def prove_part(c_part: Any, numbers: Array, expected: tuple[float, ...]) -> None:
-    c_part.restype = None
-    got = np.empty(len(expected))
-    c_part(address(numbers), address(got))
-    if not differences(got, np.array(expected)).max() <= SAME:
-        raise SystemExit(f"step.c is not the step: {c_part.__name__} gives {got}, the kernel {expected}; nothing was timed")
+def scheduled(*numbers: float) -> tuple[float, float, float]:
+    """Return the motion of the schedule and what slows; the last number says whether to turn on the spot."""
+    return schedule_kernel(*numbers[:-1], bool(numbers[-1]))
 
 
-def prove(library: ctypes.CDLL, steps: int) -> Proof:
-    """Compare C and kernel step for step, from the same memory, on drives that the kernel steers; stop where they differ."""
+def watched(*numbers: float) -> list[float]:
+    """Return the memory after a watch."""
+    memory, posed, *seen = np.array(numbers[:HEAD]), bool(numbers[HEAD]), *numbers[HEAD + 1 :]
+    out = memory.copy()
+    memory.setflags(write=False)
+    watch_kernel(memory, out, posed, *seen)
+    return out.tolist()
+
+
+def prove_part(libraries: list[ctypes.CDLL], name: str, part: Any, numbers: Array) -> None:
+    expected = np.array(part(*numbers.tolist()), dtype=np.float64, ndmin=1)
+    for library in libraries:
+        c_part = library[name]
+        c_part.restype = None
+        got = np.empty(len(expected))
+        c_part(address(numbers), address(got))
+        if not differences(got, expected).max() <= SAME:
+            raise SystemExit(f"step.c is not the step: {name} gives {got}, the kernel {expected}; nothing was timed")
+
+
+def step_in_c(library: ctypes.CDLL, settings: Array, memory: Array, measured: tuple[float, ...]) -> Array:
+    """Return the new memory and the result."""
     library.step_row.restype = None
+    row = np.concatenate([memory, measured, np.full(RESULT, 7.0)])
+    library.step_row(address(settings), address(row), ctypes.c_long(len(memory)))
+    return np.delete(row, np.s_[len(memory) : -RESULT])
+
+
+def prove(library: ctypes.CDLL, counting: ctypes.CDLL, steps: int) -> Proof:
+    """Compare C and kernel step for step, from the same memory, on drives that the kernel steers; stop where they differ."""
     rng = np.random.default_rng(SEED)
-    prove_parts(library, rng)
-    met, equal, largest, made = 0, 0, 0.0, 0
-    phases = set()
+    for _ in range(steps // 20):
+        for part in parts(rng):
+            prove_part([library, counting], *part)
+    met = {kind: Counter(dict.fromkeys(names, 0)) for kind, names in KINDS.items()}
+    equal, largest, made = 0, 0.0, 0
     while made < steps:
         controller, pose = random_controller(rng)
         world = World(rng, controller, pose)
@@ -230,9 +367,8 @@ def prove(library: ctypes.CDLL, steps: int) -> Proof:
             memory.setflags(write=False)
             out = np.empty(len(memory))
             result = step_kernel(settings, memory, measured, out)
-            row = np.concatenate([memory, measured, np.full(RESULT, 7.0)])
-            library.step_row(address(settings), address(row), ctypes.c_long(len(memory)))
-            got, expected = np.delete(row, np.s_[len(memory) : -RESULT]), np.concatenate([out, result])
+            got, expected = step_in_c(library, settings, memory, measured), np.concatenate([out, result])
+            step_in_c(counting, settings, memory, measured)
             gaps = differences(got, expected)
             if not gaps.max() <= SAME:
                 place = int(gaps.argmax())
@@ -242,12 +378,35 @@ def prove(library: ctypes.CDLL, steps: int) -> Proof:
             largest = max(largest, float(gaps.max()))
             numbers = ~np.isnan(expected)
             equal += got[numbers].tobytes() == expected[numbers].tobytes()
-            phases.add(result[4])
-            met |= int(result[5])
+            count(met, result)
             made += 1
             world.memory = out
-            world.cart.drive((result[2], result[3]))
-    return Proof(made, equal / made, largest, len(phases), met.bit_count())
+            world.answer(result[4], (result[2], result[3]))
+    met["branches"] = branches(counting)
+    never = [f"{kind}: {name}" for kind, counted in met.items() for name, often in counted.items() if not often]
+    if never:
+        raise SystemExit(f"the proof never met {', '.join(never)}: it says nothing of them; nothing was timed")
+    return Proof(made, equal / made, largest, met)
+
+
+KINDS: dict[str, list[str]] = {
+    "phases": [one.name for one in Phase],
+    "causes": [str(one.name) for one in Causes],
+    "slowed by": [one.name for one in Slowing],
+}
+
+
+def count(met: dict[str, Counter[str]], result: tuple[float, ...]) -> None:
+    met["phases"][Phase(int(result[4])).name] += 1
+    met["slowed by"][Slowing(int(result[16])).name] += 1
+    for cause in Causes(int(result[5])):
+        met["causes"][str(cause.name)] += 1
+
+
+def branches(counting: ctypes.CDLL) -> Counter[str]:
+    """Return how often each branch of step.c was entered."""
+    names = ctypes.string_at(ctypes.addressof(ctypes.c_char.in_dll(counting, "names"))).decode().split()
+    return Counter(dict(zip(names, (ctypes.c_long * len(names)).in_dll(counting, "entered"), strict=True)))
 
 
 def differences(got: Array, expected: Array) -> Array:

@@ -18,6 +18,7 @@ import statistics
 import subprocess
 import sys
 import tempfile
+import textwrap
 import timeit
 from pathlib import Path
 from struct import Struct
@@ -26,15 +27,17 @@ from typing import Any, NamedTuple
 import numpy as np
 
 import steerkit
-from same_work import SAME, Array, Cart, address, build, differences, plain_row, prove
-from steerkit import Causes, Command, Controller, Decision, Measurement, Memory, Motion, Phase, Platform, Pose, Report, compiled
+from same_work import SAME, Array, Cart, Proof, address, build, differences, plain_row, prove
+from steerkit import Command, Controller, Decision, Measurement, Memory, Motion, Phase, Platform, Pose, Report, compiled
 from steerkit.compiled import kernel
-from steerkit.controller import PHASES, causes_of, record
+from steerkit.controller import PHASES, SLOWING, causes_of, record
+from steerkit.intake import MEASURED
 from steerkit.reading import PLAIN, numbers
-from steerkit.step import MEASURED, RESULT, step_kernel
+from steerkit.step import RESULT, step_kernel
 
-CASES = ("easy", "heavy")
+CASES = ("easy", "heavy", "grid", "constant")
 QUICK, FULL = 9, 25  # repeats
+RAREST = 8  # branches printed
 SPAN = 0.004  # s; the least length of a sample
 GOALS = {  # what the design asks for: the most, or (negative) the least
     "pure step / REF": 1.5,
@@ -52,10 +55,15 @@ Pair = tuple[float, float] | None
 # --- what is timed ----------------------------------------------------------------------------------------------------------------
 
 
-def case_platform(case: str) -> Platform:
-    """Return the robot of a case: a cart seen through a plain delay, or one at 100 Hz with a long delay and a lag."""
-    period, dead_time, lag = (0.05, 0.12, 0.0) if case == "easy" else (0.01, 0.3, 0.1)
-    return Platform(
+def case_controller(case: str) -> Controller:
+    """Return the controller of a case.
+
+    By the schedule: a cart seen through a plain delay (easy); one at 100 Hz with a long delay and a lag (heavy); the first with a
+    dead band and steps of wheel speed (grid). At constant speed: the first.
+    """
+    period, dead_time, lag = (0.01, 0.3, 0.1) if case == "heavy" else (0.05, 0.12, 0.0)
+    smallest, step = (0.03, 0.008) if case == "grid" else (0.0, 0.0)
+    cart = Platform(
         radius=0.30,
         track_width=0.42,
         wheel_speed_limit=1.1,
@@ -67,7 +75,10 @@ def case_platform(case: str) -> Platform:
         period=period,
         dead_time=dead_time,
         motor_lag=lag,
+        smallest_wheel_speed=smallest,
+        wheel_speed_resolution=step,
     )
+    return Controller(cart, capture_radius=0.10, constant_speed=case == "constant")
 
 
 def recorded_drive(controller: Controller, goal: tuple[float, float], rest: int = 10) -> Array:
@@ -128,14 +139,17 @@ class ThroughC:
 
     def step(self, memory: Memory, measurement: Measurement) -> Decision:
         try:
-            at, pose, goal, pose_time, frame, speed, turn_rate, limit, hold, applied = measurement
+            at, pose, goal, pose_time, frame, speed, turn_rate, limit, hold, applied, next_goal = measurement
             x, y, heading = pose
             goal_x, goal_y = goal
             applied_v, applied_w = applied
-            if not (pose.__class__ in PLAIN and goal.__class__ in PLAIN and applied.__class__ in PLAIN):
+            next_x, next_y = next_goal
+            if not (
+                pose.__class__ in PLAIN and goal.__class__ in PLAIN and applied.__class__ in PLAIN and next_goal.__class__ in PLAIN
+            ):
                 raise TypeError
-            told = (at, x, y, heading, pose_time, goal_x, goal_y, frame, speed, turn_rate, limit, hold, applied_v, applied_w, 0.0)
-            self.pack(self.measured, 0, *told)
+            first = (at, x, y, heading, pose_time, goal_x, goal_y, frame, speed, turn_rate, limit, hold)
+            self.pack(self.measured, 0, *first, applied_v, applied_w, next_x, next_y, 0.0)
         except Exception:
             self.pack(self.measured, 0, *numbers(measurement))
         row = memory.row if isinstance(memory, Memory) else None
@@ -145,7 +159,8 @@ class ThroughC:
         out = self.row_type()
         self.c_step(settings, row.base, size, measured, out, result)
         r = self.unpack(self.result)
-        report = record(Report, (r[6], r[7], record(Pose, r[8:11]), r[11], r[12:14], record(Motion, r[14:])))
+        wanted, slowed_by = record(Motion, r[14:16]), SLOWING[int(r[16])]
+        report = record(Report, (r[6], r[7], record(Pose, r[8:11]), r[11], r[12:14], wanted, slowed_by, r[17]))
         kept = Memory.of(np.frombuffer(out))
         return record(Decision, (record(Command, r[:4]), PHASES[int(r[4])], causes_of(int(r[5])), report, kept))
 
@@ -159,7 +174,8 @@ def kernel_loop(settings: Array, memory: Array, start: Array, rows: Array) -> No
     memory[:] = start
     for k in range(len(rows)):
         m = rows[k]
-        measured = (m[0], m[1], m[2], m[3], m[4], m[5], m[6], m[7], m[8], m[9], m[10], m[11], m[12], m[13], m[14])
+        first = (m[0], m[1], m[2], m[3], m[4], m[5], m[6], m[7], m[8])
+        measured = (*first, m[9], m[10], m[11], m[12], m[13], m[14], m[15], m[16])
         step_kernel(settings, memory, measured, memory)
 
 
@@ -260,7 +276,7 @@ def measure(rivals: dict[str, Timed], steps: int, repeats: int, span: float) -> 
 
 def case_samples(case: str, rows: Array, path: Path | None, quick: bool) -> Samples:
     """Return the samples of a case; the writing of the measurement is taken off where the statement does it too."""
-    controller = Controller(case_platform(case), capture_radius=0.10)
+    controller = case_controller(case)
     found = measure(contenders(controller, rows, path), len(rows), QUICK if quick else FULL, SPAN)
     for name in {"in-place step", REF, CHECKED} & set(found):
         found[name] = [both - feed for both, feed in zip(found[name], found[FEED], strict=True)]
@@ -407,6 +423,17 @@ def print_rows(title: str, heads: tuple[str, ...], rows: dict[str, list[Pair]], 
         print(f"{name:40}" + "".join(cell(pair, scale, digits) for pair in pairs) + verdict(name, pairs))
 
 
+def print_proof(proof: Proof) -> None:
+    print(
+        f"C does the same work: {proof.steps} random closed-loop steps, {proof.equal:.2%} of them equal to the bit, largest "
+        f"difference {proof.largest:.1e}; met:"
+    )
+    for kind, counted in proof.met.items():
+        every, some = counted.most_common(), f"all {len(counted)} of step.c; the rarest: " if kind == "branches" else ""
+        told = [f"{name.lower().replace('_', ' ')} {often}" for name, often in (every[-RAREST:] if some else every)]
+        print(textwrap.fill(f"{kind}: {some}{', '.join(told)}", 120))
+
+
 def print_steps(times: dict[str, Samples], plain: dict[str, Samples], why: str) -> None:
     rows = {name: [spread(times[case][name]) for case in CASES] for name in times["easy"]}
     rows["plain Python, in its own process"] = [spread(plain[case]["plain Python"]) for case in CASES]
@@ -454,14 +481,11 @@ def compare(folder: Path, quick: bool) -> None:
     if hasattr(os, "getloadavg") and os.getloadavg()[0] > 0.5:
         print(f"The machine is busy (load {os.getloadavg()[0]:.1f}): trust the medians of the ratios, not the least times.")
     if path:
-        proof = prove(ctypes.CDLL(str(path)), 20000 if quick else 60000)
-        print(
-            f"C does the same work: {proof.steps} random closed-loop steps, {proof.equal:.2%} of them equal to the bit, largest "
-            f"difference {proof.largest:.1e}; {proof.phases} of {len(Phase)} phases, {proof.causes} of {len(Causes)} causes met"
-        )
+        libraries = [ctypes.CDLL(str(one)) for one in (path, path.with_name("counting.so"))]
+        print_proof(prove(*libraries, 60000 if quick else 200000))
     times = {}
     for case in CASES:
-        controller = Controller(case_platform(case), capture_radius=0.10)
+        controller = case_controller(case)
         rows = recorded_drive(controller, (2.0, 1.5))
         np.save(folder / f"{case}.npy", rows)
         size, period = len(controller.start(0.0).row), controller.settings.period

@@ -2,9 +2,9 @@
 
 Wheels told to run below their smallest speed stand still, and a smallest speed that was declared too low leaves the robot standing.
 From the pose at which the wheels were last seen to answer, the path and the turn that the robot should have made since are added
-up; where there is much of them and the pose has stayed within its noise, the smallest speed in use is raised by a tenth, at least to
-what was told, and so on until the robot moves. A robot that stands for another reason (blocked, motors off) is told of in the same
-way; its smallest speed is not raised beyond `most`. Metres, seconds, radians. Derived; number of periods and tenth were chosen.
+up. Where there is much of them and the pose has stayed within its noise, the smallest speed in use is raised by a tenth, at least
+to what was told, and so on until the robot moves. A robot that stands for another reason (blocked, motors off) is told of in the
+same way; its smallest speed is not raised beyond `most`. Metres, seconds, radians. Derived; periods and tenth were chosen.
 """
 
 from __future__ import annotations
