@@ -159,6 +159,68 @@ def scheduled_kernel(
 
 
 @kernel
+def constant_kernel(
+    settings: Sequence[float],
+    x: float,
+    y: float,
+    heading: float,
+    v0: float,
+    w0: float,
+    goal_x: float,
+    goal_y: float,
+    progress: float,
+    way_point: bool,
+    stays: bool,
+    slowest: float,
+    seen_x: float,
+    seen_y: float,
+    seen_heading: float,
+    last_w: float,
+    blur: float,
+    integral: float,
+    heading_before: float,
+    since: float,
+) -> tuple[float, float, float, float, float, float, float, float]:
+    """Return speed, turn rate, what slows, progress, integral, heading error, turn rate asked for and heading, at constant speed.
+
+    The pose is that at which the command takes effect; the one seen counts for the heading where nothing is predicted.
+    """
+    capture_radius, stop_radius, aim_radius, rest_radius = settings[13], settings[15], settings[16], settings[24]
+    cruise, ceiling, gain, integral_time, derivative_time = settings[17], settings[18], settings[19], settings[20], settings[21]
+    bearing, _, speed, progress = constant_speed_kernel(
+        x,
+        y,
+        heading,
+        v0,
+        w0,
+        goal_x,
+        goal_y,
+        progress,
+        cruise,
+        aim_radius,
+        stop_radius,
+        capture_radius,
+        rest_radius,
+        settings[9],
+        settings[10],
+        settings[0],
+    )
+    if way_point:
+        speed, progress = cruise, ON_THE_WAY
+    if settings[22] == 0.0:
+        heading = seen_heading
+        _, bearing = bearing_kernel(seen_x, seen_y, goal_x, goal_y)
+    error = difference_kernel(bearing, heading)
+    if stays or speed == 0.0:
+        return 0.0, 0.0, FREE, progress, 0.0, error, 0.0, heading
+    speed = max(speed, slowest)
+    rate = heading_rate_kernel(heading, heading_before, since)
+    error_to = turning_on_kernel(error, last_w, blur)
+    asked, turn_rate = steer_kernel(error_to, rate, integral, gain, ceiling, integral_time, derivative_time)
+    return speed, turn_rate, FREE if speed >= cruise else BRAKING, progress, integral, error, asked, heading
+
+
+@kernel
 def slowed_kernel(v: float, wanted: float, why: float, bound: int, top: float, most: float, stopped: bool) -> float:
     """Return what keeps the speed v from being higher: `why` the law's own reason, `top` the limit of this step."""
     if stopped:
@@ -175,9 +237,9 @@ def step_kernel(settings: Sequence[float], memory: Sequence[float], measured: Se
     """Return the result of a step, and write the new memory to `out` (which may be `memory` itself)."""
     period, dead_time, lag, top, reverse, turn = settings[0], settings[1], settings[2], settings[3], settings[4], settings[5]
     wheel, half_track, acceleration, braking, turn_acceleration = settings[6], settings[7], settings[8], settings[9], settings[10]
-    capture_radius, stay_radius, stop_radius, aim_radius = settings[13], settings[14], settings[15], settings[16]
-    cruise, ceiling, gain, integral_time, derivative_time = settings[17], settings[18], settings[19], settings[20], settings[21]
-    predict, stale_after, rest_radius, scheduled = settings[22], settings[23], settings[24], settings[25] != 0.0
+    capture_radius, stay_radius, stop_radius = settings[13], settings[14], settings[15]
+    cruise, ceiling, integral_time = settings[17], settings[18], settings[20]
+    stale_after, rest_radius, scheduled = settings[23], settings[24], settings[25] != 0.0
     rows = (len(memory) - HEAD) // 3
     nan = math.nan
     time = measured[0]
@@ -275,9 +337,9 @@ def step_kernel(settings: Sequence[float], memory: Sequence[float], measured: Se
             away, bearing = bearing_kernel(then_x, then_y, goal_x, goal_y)
             distance, _ = bearing_kernel(now_x, now_y, goal_x, goal_y)
         went = memory[PROGRESS] if same_place and progress != PASSED and memory[PROGRESS] != PASSED else ON_THE_WAY
+        blur_of_error = 6.0 * (settings[12] + settings[11] / max(distance, capture_radius))
         if scheduled:
             error = difference_kernel(bearing, then_heading)
-            turning_to = turning_on_kernel(error, last_w, 6.0 * (settings[12] + settings[11] / max(distance, capture_radius)))
             if went == STOPPING:
                 settled = capture_radius
             turned, nearest, circles = circling_kernel(
@@ -287,7 +349,7 @@ def step_kernel(settings: Sequence[float], memory: Sequence[float], measured: Se
             wanted_v, wanted_w, why, stopping = scheduled_kernel(
                 settings,
                 away,
-                turning_to,
+                turning_on_kernel(error, last_w, blur_of_error),
                 ramp_v,
                 ramp_w,
                 top,
@@ -306,7 +368,8 @@ def step_kernel(settings: Sequence[float], memory: Sequence[float], measured: Se
             if progress != PASSED:
                 progress = STOPPING if stopping else ON_THE_WAY
         else:
-            bearing, _, wanted_v, went = constant_speed_kernel(
+            wanted_v, wanted_w, why, went, integral, error, asked, before = constant_kernel(
+                settings,
                 then_x,
                 then_y,
                 then_heading,
@@ -315,35 +378,22 @@ def step_kernel(settings: Sequence[float], memory: Sequence[float], measured: Se
                 goal_x,
                 goal_y,
                 went,
-                cruise,
-                aim_radius,
-                stop_radius,
-                capture_radius,
-                rest_radius,
-                braking,
-                turn_acceleration,
-                period,
+                way_point,
+                stays,
+                slowest,
+                x,
+                y,
+                heading,
+                last_w,
+                blur_of_error,
+                0.0 if new_goal or jumped else memory[INTEGRAL],
+                nan if jumped or local else memory[HEADING_BEFORE],
+                since,
             )
-            if way_point:
-                wanted_v, went = cruise, ON_THE_WAY
             progress = went if progress != PASSED else PASSED
-            if predict == 0.0:
-                then_heading = heading
-                _, bearing = bearing_kernel(x, y, goal_x, goal_y)
-            error = difference_kernel(bearing, then_heading)
-            turning_to = turning_on_kernel(error, last_w, 6.0 * (settings[12] + settings[11] / max(distance, capture_radius)))
-            before = then_heading
-            if stays:
-                wanted_v = 0.0
             stopping = wanted_v == 0.0
-            if not stopping:
-                wanted_v = max(wanted_v, slowest)
-                why = FREE if wanted_v >= cruise else BRAKING
-                integral = 0.0 if new_goal or jumped else memory[INTEGRAL]
-                rate = heading_rate_kernel(then_heading, nan if jumped or local else memory[HEADING_BEFORE], since)
-                asked, wanted_w = steer_kernel(turning_to, rate, integral, gain, ceiling, integral_time, derivative_time)
-                if abs(asked) > ceiling:
-                    causes |= TURN_RATE_LIMIT
+            if abs(asked) > ceiling:
+                causes |= TURN_RATE_LIMIT
         if top < slowest:
             wanted_v = 0.0  # no wheel can be told to run as slowly as this step asks
 
