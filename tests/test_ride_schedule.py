@@ -298,7 +298,6 @@ def test_way_points_not_touched_are_seen():
     assert np.isnan(touches(log, CARRIAGE, points, 1.0).touched).sum() > 20
 
 
-@pytest.mark.xfail(strict=True, reason="a goal within the disc of the way point before counts as the same goal, already passed")
 def test_a_way_point_within_the_disc_of_the_one_before_is_touched_too():
     along = math.atan2(ride.read_ride().y[1], ride.read_ride().x[1])  # straight ahead of the start
     ahead, left = np.array([math.cos(along), math.sin(along)]), np.array([-math.sin(along), math.cos(along)])

@@ -320,8 +320,9 @@ def test_the_speed_at_a_way_point_is_what_the_next_goal_allows():
     limits = (0.2, 0.19, 1.0, 2.0, 0.8, 1.2, 5.0, T)
     straight_on = passing_kernel(0.0, 5.0, *limits)
     assert straight_on == 1.0
-    near = passing_kernel(0.0, 0.5, *limits)  # must be able to stop there: sqrt(2 * 0.95 * 1.2 * 0.31) less the held period
-    assert near == pytest.approx(math.sqrt(2.0 * 0.95 * 1.2 * 0.31), abs=0.95 * 1.2 * T)
+    near = passing_kernel(0.0, 0.5, *limits)
+    way = math.dist((-0.2 * math.cos(0.96), 0.2 * math.sin(0.96)), (0.5, 0.0)) - 0.19  # from where the disc is touched 55 deg aside
+    assert near == pytest.approx(math.sqrt(2.0 * 0.95 * 1.2 * way), abs=0.95 * 1.2 * T)  # v^2/2b, less the held period
     assert passing_kernel(1.0, 1.0, *limits) < straight_on
     assert passing_kernel(1.6, 5.0, *limits) == 0.0
     turned = [passing_kernel(angle, 2.0, *limits) for angle in np.linspace(0.0, 1.6, 60)]

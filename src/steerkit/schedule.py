@@ -25,6 +25,7 @@ SHARE = 0.95  # of braking and turn acceleration is planned with; the rest is fo
 TURN_SHARE = 0.85  # of the turning that is left the speed may spoil
 LEAD = 0.4  # of the ramp of speed that a turn on the spot may run ahead of
 LEAST_GATE = 0.05  # rad; an error below this never stops the robot
+ENTRY = 0.96  # rad; asin of AIM: a disc is touched this far aside of the way at most
 CIRCLES = 2.5 * math.pi  # rad
 NEARER = 0.9  # of the distance counts as nearer
 TINY = 1e-12
@@ -173,15 +174,17 @@ def passing_kernel(
 ) -> float:
     """Return the speed (m/s) at a way point that its next goal allows: one `distance` on, by `turned` off the way to the way point.
 
-    From there the robot can still stop at the next goal, and its tightest curve brings it there; where the next goal lies behind,
-    it stops.
+    From where its disc is touched, at worst ENTRY aside, the robot can still stop at the next goal, and its tightest curve brings
+    it there; where the next goal lies behind, it stops.
     """
     size = abs(turned)
     aim = min(AIM * target_radius, 0.5 * distance)
     if distance <= target_radius or size >= PI / 2.0:
         return 0.0
     b, al = SHARE * braking, SHARE * turn_acceleration
-    speed = held_speed_kernel(distance - target_radius, b, period, top)
+    r, cosine = capture_radius, math.cos(min(size + ENTRY, PI))
+    left = math.sqrt(max(0.0, distance * distance + r * r + 2.0 * distance * r * cosine))
+    speed = held_speed_kernel(left - target_radius, b, period, top)
     off = size - math.asin(aim / distance)
     if off <= TINY:
         return speed

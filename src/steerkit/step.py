@@ -63,6 +63,7 @@ from steerkit.signals import HEAD, Causes, Phase, Slowing
 from steerkit.wheel_grid import on_grid_kernel, slowest_kernel
 
 REST = 0.01  # m/s: wheels slower than this are at rest
+SAME = 0.05  # of the capture radius: a way point that moved less is the same
 PASSED, STOPPING = 3.0, 2.0  # progress toward a goal, beside those of `approach`
 
 
@@ -291,7 +292,7 @@ def step_kernel(settings: Sequence[float], memory: Sequence[float], measured: Se
     causes |= trouble
     given_x, given_y = goal_x, goal_y
     way_point = aimed and next_x == next_x
-    passed = way_point and memory[PROGRESS] == PASSED and not new_goal
+    passed = way_point and memory[PROGRESS] == PASSED and moved <= max(stay_radius - capture_radius, SAME * capture_radius)
     if passed:
         goal_x, goal_y, way_point = next_x, next_y, False
     if jumped:
