@@ -52,6 +52,7 @@ typedef struct { double x, y; } Point;
 typedef struct { double begin, until; } Span;
 typedef struct { double v, w, why; bool stopping; } Wanted;
 typedef struct { double turned, nearest; bool circles; } Circling;
+typedef struct { double v, w, why, progress, integral, error, asked, heading; } Constant;
 typedef struct { Motion command, ramp; } Gridded;
 typedef struct { double since; bool good; } Clock;
 typedef struct { Motion motion; double limit; int trouble; } Seen;
@@ -505,8 +506,8 @@ static Circling circling(double distance, double turned, double nearest, double 
 }
 
 static double passing_speed(
-    double turned, double distance, double target_radius, double top, double turn, double braking, double turn_acceleration,
-    double period)
+    double turned, double distance, double capture_radius, double target_radius, double top, double turn, double braking,
+    double turn_acceleration, double period)
 {
     double size = fabs(turned);
     double aim = least(SCHEDULE_AIM * target_radius, 0.5 * distance);
@@ -515,7 +516,9 @@ static double passing_speed(
         return 0.0;
     }
     double b = SCHEDULE_SHARE * braking, al = SCHEDULE_SHARE * turn_acceleration;
-    double speed = held_speed(distance - target_radius, b, period, top);
+    double r = capture_radius, cosine = cos(least(size + SCHEDULE_ENTRY, SCHEDULE_PI));
+    double way = sqrt(most(0.0, distance * distance + r * r + 2.0 * distance * r * cosine));
+    double speed = held_speed(way - target_radius, b, period, top);
     double off = size - asin(aim / distance);
     if (off <= SCHEDULE_TINY) {
         ENTER(PASSING_STRAIGHT);
@@ -704,7 +707,7 @@ static bool sound(const double *memory, long rows)
     for (long i = HEAD; i < HEAD + 3 * rows; i += 3)
         if (!(0.0 <= memory[i] && memory[i] <= FAR && usable(memory[i + 1], FAST) && usable(memory[i + 2], FAST)))
             return false;
-    bool posed = !(fabs(memory[X]) > FAR || fabs(memory[Y]) > FAR || fabs(memory[HEADING]) > FAR);
+    bool posed = (usable(memory[X], FAR) && usable(memory[Y], FAR) && usable(memory[HEADING], FAR)) || memory[POSE_AGE] > FAR;
     bool motion = usable(memory[SPEED], FAST) && usable(memory[TURN_RATE], FAST);
     bool base = usable(memory[BASE_SPEED], FAST) && usable(memory[BASE_TURN_RATE], FAST);
     bool ages = memory[POSE_AGE] >= 0.0 && 0.0 <= memory[BASE_AGE] && memory[BASE_AGE] <= FAR;
@@ -940,7 +943,8 @@ static Wanted scheduled(
     double turn = least(s[S_TOP_TURN_RATE], s[S_WHEEL_SPEED] / half_track);
     double passing = 0.0;
     if (way_point)
-        passing = passing_speed(next_turn, next_distance, target_radius, top, turn, braking, turn_acceleration, period);
+        passing = passing_speed(
+            next_turn, next_distance, capture_radius, target_radius, top, turn, braking, turn_acceleration, period);
     else {
         double within = stopping ? capture_radius : stop_radius;
         if (stops(distance, error, before.v, before.w, within, settled, braking, turn_acceleration, period, slowest))
@@ -951,6 +955,37 @@ static Wanted scheduled(
         turn_acceleration, period, settling, slowest, half_track, on_the_spot);
     found.stopping = found.v == 0.0 && found.w == 0.0;
     return found;
+}
+
+static Constant constant(
+    const double *s, Pose p, Motion ramp, Point goal, double progress, bool way_point, bool stays, double slowest, Pose seen,
+    double last_w, double blur, double integral, double heading_before, double since)
+{
+    double cruise = s[S_CRUISE], ceiling = s[S_CEILING], gain = s[S_GAIN], heading = p.heading;
+    Approach found = constant_speed(
+        p, ramp, goal.x, goal.y, progress, cruise, s[S_AIM_RADIUS], s[S_STOP_RADIUS], s[S_CAPTURE_RADIUS], s[S_REST_RADIUS],
+        s[S_BRAKING], s[S_TURN_ACCELERATION], s[S_PERIOD]);
+    double bearing = found.bearing, speed = found.speed;
+    progress = found.progress;
+    if (way_point) {
+        ENTER(CONSTANT_WAY_POINT);
+        speed = cruise;
+        progress = APPROACH_ON_THE_WAY;
+    }
+    if (s[S_PREDICT] == 0.0) {
+        heading = seen.heading;
+        bearing = bearing_to(seen.x, seen.y, goal.x, goal.y);
+    }
+    double error = difference(bearing, heading);
+    if (stays || speed == 0.0)
+        return (Constant){0.0, 0.0, SCHEDULE_FREE, progress, 0.0, error, 0.0, heading};
+    speed = most(speed, slowest);
+    double rate = heading_rate(heading, heading_before, since);
+    double error_to = turning_on(error, last_w, blur);
+    double asked = gain * (error_to + integral / s[S_INTEGRAL_TIME] - s[S_DERIVATIVE_TIME] * rate);
+    double turn_rate = clip(asked, -ceiling, ceiling);
+    double why = speed >= cruise ? SCHEDULE_FREE : SCHEDULE_BRAKING;
+    return (Constant){speed, turn_rate, why, progress, integral, error, asked, heading};
 }
 
 static double slowed_by(double v, double wanted, double why, int bound, double top, double fastest, bool stopped)
@@ -972,8 +1007,7 @@ void step_apart(const double *settings, const double *memory, long size, const d
     double reverse = s[S_REVERSE_SPEED], turn = s[S_TOP_TURN_RATE], wheel = s[S_WHEEL_SPEED], half_track = s[S_HALF_TRACK];
     double acceleration = s[S_ACCELERATION], braking = s[S_BRAKING], turn_acceleration = s[S_TURN_ACCELERATION];
     double capture_radius = s[S_CAPTURE_RADIUS], stay_radius = s[S_STAY_RADIUS], stop_radius = s[S_STOP_RADIUS];
-    double aim_radius = s[S_AIM_RADIUS], cruise = s[S_CRUISE], ceiling = s[S_CEILING], gain = s[S_GAIN];
-    double integral_time = s[S_INTEGRAL_TIME], derivative_time = s[S_DERIVATIVE_TIME], predict = s[S_PREDICT];
+    double cruise = s[S_CRUISE], integral_time = s[S_INTEGRAL_TIME];
     double stale_after = s[S_STALE_AFTER], rest_radius = s[S_REST_RADIUS];
     bool by_schedule = s[S_SCHEDULED] != 0.0;
     long rows = (size - HEAD) / 3;
@@ -1016,7 +1050,6 @@ void step_apart(const double *settings, const double *memory, long size, const d
     }
     double blur = s[S_POSITION_NOISE] + s[S_HEADING_NOISE] * half_track;
     double patience = ANSWERING_SILENT_PERIODS * period + dead_time + lag;
-    double noise = s[S_HEADING_NOISE], spread = s[S_POSITION_NOISE];
     if (watch(memory, out, located, posed.pose, told, since, blur, half_track, patience, top, s[S_MOST_RAISED]))
         causes |= NO_ANSWER;
     double slowest = slowest_of(out[SLOWEST], s[S_WHEEL_SPEED_STEP]);
@@ -1025,7 +1058,8 @@ void step_apart(const double *settings, const double *memory, long size, const d
     causes |= next.trouble;
     Point given = goal.point;
     bool way_point = goal.aimed && next.point.x == next.point.x;
-    bool passed = way_point && memory[PROGRESS] == STEP_PASSED && !goal.fresh;
+    bool passed = way_point && memory[PROGRESS] == STEP_PASSED
+        && goal.moved <= most(stay_radius - capture_radius, STEP_SAME * capture_radius);
     if (passed) {
         ENTER(PASSED_BEFORE);
         goal.point = next.point;
@@ -1078,10 +1112,11 @@ void step_apart(const double *settings, const double *memory, long size, const d
         }
         bool goes_on = same_place && progress != STEP_PASSED && memory[PROGRESS] != STEP_PASSED;
         double went = goes_on ? memory[PROGRESS] : APPROACH_ON_THE_WAY;
+        double blur_of_error = 6.0 * (s[S_HEADING_NOISE] + s[S_POSITION_NOISE] / most(distance, capture_radius));
         if (by_schedule) {
             ENTER(SCHEDULE_LAW);
             error = difference(bearing, end.heading);
-            double turning_to = turning_on(error, last.w, 6.0 * (noise + spread / most(distance, capture_radius)));
+            double turning_to = turning_on(error, last.w, blur_of_error);
             if (went == STEP_STOPPING) {
                 ENTER(SETTLING_IN);
                 settled = capture_radius;
@@ -1113,40 +1148,21 @@ void step_apart(const double *settings, const double *memory, long size, const d
                 progress = stopping ? STEP_STOPPING : APPROACH_ON_THE_WAY;
         } else {
             ENTER(CONSTANT_LAW);
-            Approach approach = constant_speed(
-                end, ramp, goal.point.x, goal.point.y, went, cruise, aim_radius, stop_radius, capture_radius, rest_radius, braking,
-                turn_acceleration, period);
-            bearing = approach.bearing;
-            wanted_v = approach.speed;
-            went = approach.progress;
-            if (way_point) {
-                ENTER(CONSTANT_WAY_POINT);
-                wanted_v = cruise;
-                went = APPROACH_ON_THE_WAY;
-            }
-            progress = progress != STEP_PASSED ? went : STEP_PASSED;
-            double heading = end.heading;
-            if (predict == 0.0) {
-                heading = posed.pose.heading;
-                bearing = bearing_to(posed.pose.x, posed.pose.y, goal.point.x, goal.point.y);
-            }
-            end.heading = heading;
-            error = difference(bearing, heading);
-            double turning_to = turning_on(error, last.w, 6.0 * (noise + spread / most(distance, capture_radius)));
-            heading_before = heading;
-            if (stays)
-                wanted_v = 0.0;
+            double heading_then = jumped || posed.local ? NAN : memory[HEADING_BEFORE];
+            Constant found = constant(
+                settings, end, ramp, goal.point, went, way_point, stays, slowest, posed.pose, last.w, blur_of_error,
+                goal.fresh || jumped ? 0.0 : memory[INTEGRAL], heading_then, since);
+            wanted_v = found.v;
+            wanted_w = found.w;
+            why = found.why;
+            integral = found.integral;
+            error = found.error;
+            asked = found.asked;
+            heading_before = found.heading;
+            progress = progress != STEP_PASSED ? found.progress : STEP_PASSED;
             stopping = wanted_v == 0.0;
-            if (!stopping) {
-                wanted_v = most(wanted_v, slowest);
-                why = wanted_v >= cruise ? SCHEDULE_FREE : SCHEDULE_BRAKING;
-                integral = goal.fresh || jumped ? 0.0 : memory[INTEGRAL];
-                double rate = heading_rate(heading, jumped || posed.local ? NAN : memory[HEADING_BEFORE], since);
-                asked = gain * (turning_to + integral / integral_time - derivative_time * rate);
-                wanted_w = clip(asked, -ceiling, ceiling);
-                if (fabs(asked) > ceiling)
-                    causes |= TURN_RATE_LIMIT;
-            }
+            if (fabs(asked) > s[S_CEILING])
+                causes |= TURN_RATE_LIMIT;
         }
         if (top < slowest) {
             ENTER(TOO_SLOW_A_STEP);

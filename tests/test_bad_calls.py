@@ -492,6 +492,12 @@ BAD_CALLS = [
         "smallest_wheel_speed=0.4 m/s in steps of wheel_speed_resolution=0.15 m/s (0.45 m/s) must be <= turn_rate_limit * track_width / 2 = 0.42 m/s, else it cannot turn on the spot; raise the turn-rate limit",
     ),
     (
+        "resolution too fine to count",
+        "platform(wheel_speed_resolution=1e-20)",
+        ValueError,
+        "wheel_speed_resolution=1e-20 m/s must be 0 or >= 1e-06 m/s; give the step of the wheel-speed command, 0 for any",
+    ),
+    (
         "resolution negative",
         "platform(wheel_speed_resolution=-0.01)",
         ValueError,

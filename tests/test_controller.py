@@ -694,3 +694,12 @@ def test_steps_leave_no_memory_behind():
     grown = tracemalloc.get_traced_memory()[0] - before
     tracemalloc.stop()
     assert grown < 20_000
+
+
+def test_a_memory_with_a_pose_that_is_no_number_is_begun_anew():
+    steering = controller(constant_speed=True)
+    row = steering.step(steering.start(0.0), Measurement(0.0, (0, 0, 0), (2, 0))).memory.row.copy()
+    row[3] = NAN
+    decision = steering.step(Memory(row), Measurement(0.05, None, (2, 0), next_goal=(3, 0)))
+    assert Causes.BAD_MEMORY in decision.causes
+    assert decision.command == (0.0, 0.0, 0.0, 0.0)

@@ -102,12 +102,12 @@ def test_lag_alone_overshoots_as_printed(share, printed):
     zeta = 1.0 / (2.0 * math.sqrt(share))
     assert 100.0 * m.overshoot == pytest.approx(float(printed), abs=1.001 * 0.5e-4)
     assert m.overshoot == pytest.approx(math.exp(-math.pi * zeta / math.sqrt(1.0 - zeta * zeta)), abs=1e-9)
-    assert m.swings
+    assert m.overshoots
 
 
 def test_critical_lag_does_not_swing():
-    assert not margins(0.249 / 0.4, motor_lag=0.4).swings
-    assert margins(0.251 / 0.4, motor_lag=0.4).swings
+    assert not margins(0.249 / 0.4, motor_lag=0.4).overshoots
+    assert margins(0.251 / 0.4, motor_lag=0.4).overshoots
 
 
 # H3: stable below pi/2, no swinging up to 1/e (Hayes 1950; Driver, Sasser & Slater 1973); overshoots derived
@@ -123,8 +123,8 @@ def test_dead_time_alone_is_stable_below_hayes_border_and_calm_up_to_one_over_e(
     assert margins(math.pi / 2.0 - 1e-6, dead_time=1.0).stable
     assert not margins(math.pi / 2.0 + 1e-6, dead_time=1.0).stable
     assert margins(1.0, dead_time=1.0).gain_margin == pytest.approx(math.pi / 2.0, rel=1e-10)
-    assert not margins(math.exp(-1.0) - 1e-9, dead_time=1.0).swings
-    assert margins(math.exp(-1.0) + 1e-9, dead_time=1.0).swings
+    assert not margins(math.exp(-1.0) - 1e-9, dead_time=1.0).overshoots
+    assert margins(math.exp(-1.0) + 1e-9, dead_time=1.0).overshoots
 
 
 # H4: whole periods of delay, K T stable below 2 sin(pi/(2(2d+1))) (Levin & May 1976), smooth up to d^d/(d+1)^(d+1) (Erbe & Zhang
@@ -139,8 +139,8 @@ H4: ClassVar = [
 def test_sampled_loop_has_the_published_limits(delay, stable, smooth):
     m = margins(0.5 * smooth / 0.1, period=0.1, dead_time=0.1 * delay)
     assert m.gain_margin == pytest.approx(stable / (0.5 * smooth), rel=1e-9)
-    assert not margins((smooth - 1e-7) / 0.1, period=0.1, dead_time=0.1 * delay).swings
-    assert margins((smooth + 1e-7) / 0.1, period=0.1, dead_time=0.1 * delay).swings
+    assert not margins((smooth - 1e-7) / 0.1, period=0.1, dead_time=0.1 * delay).overshoots
+    assert margins((smooth + 1e-7) / 0.1, period=0.1, dead_time=0.1 * delay).overshoots
     assert not margins((stable + 1e-7) / 0.1, period=0.1, dead_time=0.1 * delay).stable
 
 
@@ -148,7 +148,7 @@ def test_sampled_loop_has_the_published_limits(delay, stable, smooth):
 def test_without_delay_the_answer_is_exponential():
     m = margins(2.0)
     assert m.settling_time == pytest.approx(math.log(50.0) / 2.0, rel=1e-9)
-    assert (m.overshoot, m.swings, m.gain_margin) == (0.0, False, INF)
+    assert (m.overshoot, m.overshoots, m.gain_margin) == (0.0, False, INF)
 
 
 @pytest.mark.parametrize("settings", [(0.5, INF, 0.0), (0.5, 8.0, 0.0), (0.7, 8.8, 0.3)])
@@ -232,7 +232,7 @@ def test_continuous_step_agrees_with_solve_ivp_over_delays():
 def test_an_unstable_loop_is_told_as_such(settings, text):
     m = margins(**settings)
     assert str(m) == text
-    assert (m.stable, m.settling_time, m.overshoot, m.swings) == (False, INF, INF, True)
+    assert (m.stable, m.settling_time, m.overshoot, m.overshoots) == (False, INF, INF, True)
     assert all(math.isnan(one) for one in (m.phase_margin, m.delay_margin, m.sensitivity, m.crossover))
 
 

@@ -321,7 +321,7 @@ def test_the_speed_at_a_way_point_is_what_the_next_goal_allows():
     straight_on = passing_kernel(0.0, 5.0, *limits)
     assert straight_on == 1.0
     near = passing_kernel(0.0, 0.5, *limits)
-    way = math.dist((-0.2 * math.cos(0.96), 0.2 * math.sin(0.96)), (0.5, 0.0)) - 0.19  # from where the disc is touched 55 deg aside
+    way = math.dist((-0.2 * math.cos(1.13), 0.2 * math.sin(1.13)), (0.5, 0.0)) - 0.19  # from where the disc is touched 65 deg aside
     assert near == pytest.approx(math.sqrt(2.0 * 0.95 * 1.2 * way), abs=0.95 * 1.2 * T)  # v^2/2b, less the held period
     assert passing_kernel(1.0, 1.0, *limits) < straight_on
     assert passing_kernel(1.6, 5.0, *limits) == 0.0

@@ -152,7 +152,7 @@ def drive_kernel(distance, error, v0, w0, radius, limits, depth, most):
         v, w = 0.0, 0.0
         if not stops_kernel(rho, off, v0, w0, (1.0 - 0.5 * depth) * radius, radius, b, al, T, none):
             r = (1.0 - depth) * radius
-            v, w, _ = schedule_kernel(rho, off, v0, w0, none, radius, r, top, turn, a, b, al, T, T, none, half)
+            v, w, _ = schedule_kernel(rho, off, v0, w0, none, radius, r, top, turn, a, b, al, T, T, none, half, False)
         v0, w0, _ = turn_first_kernel(v0, w0, v, w, top, turn, wheel, half, a * T, b * T, al * T)
         x, y, heading = arc_kernel(x, y, heading, v0, w0, T)
     return -1

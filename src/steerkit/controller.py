@@ -207,11 +207,20 @@ class Controller:
             kept = "the fastest workable" if self.speed == w.fastest else f"the fastest workable is {rounded_down(w.fastest):g} m/s"
             lines = [
                 f"Constant speed {rounded_down(self.speed):g} m/s ({kept}; bound by {w.bound}).",
-                f"Heading gain {self.gain:.4g} 1/s; those from {w.low:.4g} to {w.high:.4g} 1/s work.",
+                f"Heading gain {self.gain:.4g} 1/s; those from {w.low:.4g} to {w.high:.4g} 1/s work.{terms(s)}",
                 turning,
             ]
         lines.append("Unguarded: no range sensor; nothing here looks for obstacles.")
         return "\n".join(lines + self.platform.notes())
+
+
+def terms(settings: Settings) -> str:
+    """Return what a sentence on the gain lacks where it is not P alone."""
+    s = settings
+    integral = f" integral time {s.integral_time:g} s" if s.integral_time < math.inf else ""
+    derivative = f" derivative time {s.derivative_time:g} s" if s.derivative_time > 0.0 else ""
+    both = ",".join(one for one in (integral, derivative) if one)
+    return f" With{both} (the range is that of P alone)." if both else ""
 
 
 class InPlace:

@@ -23,6 +23,12 @@ from steerkit.windows import (
 def reasons(platform: Platform, radius: float, speed: float, predict: bool, found: Window, gain: float) -> tuple[str, ...]:
     """Return why the window is what it is, why this gain and this speed, and what comes next; a sentence each."""
     sentences = [low_reason(radius, speed, found), high_reason(platform, speed, predict, found)]
+    tightest = speed / found.ceiling
+    if found.margin * tightest > radius * (1.0 + 1e-9):
+        sentences.append(
+            f"turn rate {found.ceiling:.4g} rad/s: at {rounded_down(speed):g} m/s the tightest circle has a radius of "
+            f"{tightest:.4g} m; it shall be {found.margin:.3g} times smaller than the disc (derived)."
+        )
     if gain == gain:
         sentences.append(gain_reason(platform, found, gain))
     sentences += [speed_reason(platform, radius, predict, found), *lag_reason(platform, radius, predict, found, gain)]

@@ -128,7 +128,6 @@ def turn_first_kernel(
     """
     bound = 0
     low, high = reach_kernel(v0, faster, slower)
-    low = max(low, min(0.0, high))
     least_v = max(0.0, low, -high)
     least_w = max(0.0, abs(w0) - turning)
     w1 = clip_kernel(w, w0 - turning, w0 + turning)

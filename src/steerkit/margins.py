@@ -51,7 +51,7 @@ class Margins(NamedTuple):
     `gain_margin`: by how much the gain may grow (below 1 for an unstable loop: to what it must shrink; 0 if no gain is stable);
     `lower_gain_margin`: to what share it may fall (0: any). `phase_margin` rad; `delay_margin` s of dead time more;
     `sensitivity` Ms, the largest 1/|1 + L|; `crossover` rad/s. `overshoot` of a heading step as a share, `settling_time` s until
-    it stays within 2 %, `swings` whether its error changes sign. An unstable loop has NaN where nothing can be told.
+    it stays within 2 %, `overshoots` whether its error changes sign. An unstable loop has NaN where nothing can be told.
     """
 
     gain: float
@@ -64,7 +64,7 @@ class Margins(NamedTuple):
     crossover: float
     overshoot: float
     settling_time: float
-    swings: bool
+    overshoots: bool
 
     def __str__(self) -> str:
         if not self.stable:
@@ -73,7 +73,7 @@ class Margins(NamedTuple):
             most = self.gain * self.gain_margin
             return f"unstable: at gain {self.gain:.4g} 1/s it swings wider and wider; below {most:.4g} 1/s it is stable"
         lower = f" ({self.lower_gain_margin:.3g} downwards)" if self.lower_gain_margin > 0.0 else ""
-        how = f"overshoots a step by {100.0 * self.overshoot:.2g} %" if self.swings else "no overshoot"
+        how = f"overshoots a step by {100.0 * self.overshoot:.2g} %" if self.overshoots else "no overshoot"
         return (
             f"gain margin {self.gain_margin:.4g}{lower}, phase margin {math.degrees(self.phase_margin):.4g} deg, "
             f"delay margin {self.delay_margin:.4g} s\n"
@@ -305,10 +305,10 @@ def margins(
     elif td * k >= 1.0 and lag == 0.0:
         delay = 0.0  # without a lag a derivative this strong bears no dead time at all
     answer = step_answer(k, ti, td, period, tau, lag)
-    swings = k > smooth_gain(period, tau, lag) if ti == math.inf and td == 0.0 else answer.overshoot > 1e-9
+    overshoots = k > smooth_gain(period, tau, lag) if ti == math.inf and td == 0.0 else answer.overshoot > 1e-9
     phase, crossover = float(np.min(left, initial=math.inf)), float(np.max(at, initial=0.0))
     return Margins(
-        k, True, upper, lower, phase, delay, largest_sensitivity(loop), crossover, answer.overshoot, answer.time, bool(swings)
+        k, True, upper, lower, phase, delay, largest_sensitivity(loop), crossover, answer.overshoot, answer.time, bool(overshoots)
     )
 
 

@@ -38,7 +38,8 @@ def sound_kernel(memory: Sequence[float], rows: int) -> bool:
     for i in range(HEAD, HEAD + 3 * rows, 3):
         if not (0.0 <= memory[i] <= FAR and usable_kernel(memory[i + 1], FAST) and usable_kernel(memory[i + 2], FAST)):
             return False
-    posed = not (abs(memory[X]) > FAR or abs(memory[Y]) > FAR or abs(memory[HEADING]) > FAR)  # NaN: none yet
+    posed = usable_kernel(memory[X], FAR) and usable_kernel(memory[Y], FAR) and usable_kernel(memory[HEADING], FAR)
+    posed = posed or memory[POSE_AGE] > FAR  # none yet
     motion = usable_kernel(memory[SPEED], FAST) and usable_kernel(memory[TURN_RATE], FAST)
     base = usable_kernel(memory[BASE_SPEED], FAST) and usable_kernel(memory[BASE_TURN_RATE], FAST)
     ages = memory[POSE_AGE] >= 0.0 and 0.0 <= memory[BASE_AGE] <= FAR

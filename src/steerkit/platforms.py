@@ -207,6 +207,8 @@ def checked(one: Field[Any], value: object) -> float:
     least = SHORTEST_PERIOD if one.name == "period" else SMALLEST
     if size < least and not may_be_zero:
         raise ValueError(f"{one.name}={shown(size, told['unit'])} must be >= {shown(least, told['unit'])}; {told['measure']}")
+    if one.name == "wheel_speed_resolution" and 0.0 < size < least:
+        raise ValueError(f"{one.name}={shown(size, told['unit'])} must be 0 or >= {shown(least, told['unit'])}; {told['measure']}")
     if size > told["most"]:
         raise ValueError(
             f"{one.name}={shown(size, told['unit'])} must be <= {shown(told['most'], told['unit'])}; "

@@ -211,7 +211,7 @@ class Memory:
     def of(cls, row: NDArray[np.float64]) -> Memory:
         """Return a memory that takes over a row which nobody else will write to."""
         made = object.__new__(cls)
-        row.setflags(write=False)
+        row.setflags(False)
         made.row = row
         return made
 
@@ -274,4 +274,4 @@ class Decision(NamedTuple):
             else ""
         )
         does = f"{self.phase.name.lower()}: {c.speed:+.3f} m/s, {c.turn_rate:+.3f} rad/s"
-        return f"{does}; {away}{off}{slow} ({self.causes.words()})"
+        return f"{does}; {away}{off}{slow}" + (f" ({self.causes.words()})" if self.causes else "")
