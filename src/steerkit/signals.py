@@ -211,7 +211,7 @@ class Memory:
     def of(cls, row: NDArray[np.float64]) -> Memory:
         """Return a memory that takes over a row which nobody else will write to."""
         made = object.__new__(cls)
-        row.setflags(False)
+        row.setflags(False)  # type: ignore[call-arg]  # by position: quicker
         made.row = row
         return made
 
