@@ -21,11 +21,41 @@ from concurrent.futures import ThreadPoolExecutor
 from pathlib import Path
 
 ROOT = Path(__file__).parent.parent
-FILES = ("angles", "kinematics", "heading", "approach", "limits", "prediction", "step", "sizing")
-ASKED = ("angles", "kinematics", "heading", "approach")
+FILES = (
+    *(
+        "angles",
+        "kinematics",
+        "heading",
+        "approach",
+        "schedule",
+        "wheel_grid",
+        "answering",
+        "limits",
+        "prediction",
+        "intake",
+        "step",
+    ),
+    *("windows", "gain_limits", "margins", "sizing", "shortest", "way_ahead", "travel_time", "settings"),
+)
+ASKED = ("angles", "kinematics", "heading", "approach", "schedule", "wheel_grid", "answering")
 QUICK = ["test_angles.py", "test_kinematics.py", "test_limits.py", "test_controller.py", "test_properties.py", "test_heading.py"]
-FIRST = {"angles": ["test_angles.py"], "kinematics": ["test_kinematics.py"], "limits": ["test_limits.py"]}  # else test_heading.py
-SLOW = ["test_sizing.py", "test_window.py", "test_bad_calls.py", "test_ride.py", "test_house.py"]
+FIRST = {  # else test_heading.py
+    "angles": ["test_angles.py"],
+    "kinematics": ["test_kinematics.py"],
+    "limits": ["test_limits.py"],
+    **dict.fromkeys(("schedule", "wheel_grid", "answering"), ["test_schedule.py"]),
+    **dict.fromkeys(("windows", "gain_limits", "margins", "sizing"), ["test_margins.py", "test_sizing.py"]),
+    **dict.fromkeys(("shortest", "way_ahead", "travel_time"), ["test_shortest.py", "test_way_ahead.py", "test_travel_time.py"]),
+}
+SLOW = [
+    "test_schedule.py",
+    "test_ride_schedule.py",
+    "test_sizing.py",
+    "test_window.py",
+    "test_bad_calls.py",
+    "test_ride.py",
+    "test_house.py",
+]
 
 SWAPS = {
     ast.Add: ast.Sub,
