@@ -43,9 +43,9 @@ FIRST = {  # else test_heading.py
     "angles": ["test_angles.py"],
     "kinematics": ["test_kinematics.py"],
     "limits": ["test_limits.py"],
-    **dict.fromkeys(("schedule", "wheel_grid", "answering"), ["test_schedule.py"]),
-    **dict.fromkeys(("windows", "gain_limits", "margins", "sizing"), ["test_margins.py", "test_sizing.py"]),
-    **dict.fromkeys(("shortest", "way_ahead", "travel_time"), ["test_shortest.py", "test_way_ahead.py", "test_travel_time.py"]),
+    **{name: ["test_schedule.py"] for name in ("schedule", "wheel_grid", "answering")},
+    **{name: ["test_margins.py", "test_sizing.py"] for name in ("windows", "gain_limits", "margins", "sizing")},
+    **{name: [f"test_{name}.py", "test_travel_time.py"] for name in ("shortest", "way_ahead", "travel_time")},
 }
 SLOW = [
     "test_schedule.py",
