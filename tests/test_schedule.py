@@ -18,7 +18,7 @@ from rough_loop import COLUMNS, Truth, rough_drive, true_of
 from schedule_studies import Row, changing, common_draw, many, noise_of, noisy, wrong
 from steerkit import Causes, Controller, Measurement, Phase, Platform, Slowing, compiled
 from steerkit.kinematics import arc
-from steerkit.schedule import cut_stop_kernel, passing_kernel, schedule_kernel, turn_time_kernel
+from steerkit.schedule import cut_stop_kernel, passing_kernel, schedule_kernel, stops_kernel, turn_time_kernel
 from steerkit.shortest import straight_time
 from steerkit.wheel_grid import on_grid_kernel, slowest_kernel
 
@@ -193,6 +193,36 @@ def test_a_stop_is_shorter_where_the_wheels_stand_still_below_a_speed():
     assert cut_stop_kernel(1.0, 0.3, 1.0, 0.0) == pytest.approx(2.2)
     assert cut_stop_kernel(1.0, 0.3, 1.0, 0.2) == pytest.approx(2.1)
     assert cut_stop_kernel(0.1, 0.3, 1.0, 0.2) == 0.0
+
+
+@pytest.mark.parametrize("v0", [0.3, 0.6, 1.0])
+@pytest.mark.parametrize("error", [0.0, 0.4, -1.2, 2.5])
+def test_it_stops_exactly_where_the_hardest_straight_stop_ends_inside(v0, error):
+    """By hand: commands v0 - b T, v0 - 2 b T, ... each held for T, along the heading; the goal at a distance and an error."""
+    b, radius, distance = 1.2, 0.1, 0.2
+    path = sum(max(0.0, v0 - k * b * T) * T for k in range(1, 40))
+    end = math.dist((path, 0.0), (distance * math.cos(error), distance * math.sin(error)))
+    for stop_radius in (0.999 * end, 1.001 * end):
+        got = stops_kernel(distance, error, v0, 0.0, stop_radius, radius, b, 5.0, T, 0.0)
+        assert got == (end <= stop_radius)
+
+
+@pytest.mark.parametrize(("w0", "turned"), [(0.9, 0.05 * (0.65 + 0.4 + 0.15)), (-0.9, -0.05 * (0.65 + 0.4 + 0.15))])
+def test_a_stop_that_still_turns_counts_from_both_ends_of_its_turn(w0, turned):
+    """By hand: turn rates 0.65, 0.4, 0.15 rad/s held for T after 0.9; the end lies between straight on and turned all the way."""
+    b, v0, distance, error = 1.2, 0.6, 0.2, 0.3
+    path = sum(max(0.0, v0 - k * b * T) * T for k in range(1, 20))
+    goal = (distance * math.cos(error), distance * math.sin(error))
+    ends = [math.dist((path * math.cos(a), path * math.sin(a)), goal) for a in (0.0, turned)]
+    for stop_radius in (0.999 * max(ends), 1.001 * max(ends)):
+        got = stops_kernel(distance, error, v0, w0, stop_radius, 0.05, b, 5.0, T, 0.0)
+        assert got == (max(ends) <= stop_radius)
+
+
+def test_a_stop_that_turns_by_more_than_a_radian_must_end_inside_whichever_way_it_goes():
+    path = sum(max(0.0, 0.6 - k * 1.2 * T) * T for k in range(1, 20))
+    for stop_radius in (0.999 * (0.03 + path), 1.001 * (0.03 + path)):
+        assert stops_kernel(0.03, 0.2, 0.6, 4.0, stop_radius, 0.05, 1.2, 5.0, T, 0.0) == (0.03 + path <= stop_radius)
 
 
 BANDED = {"smallest_wheel_speed": 0.05, "wheel_speed_resolution": 0.0, "dead_time": 0.1}
