@@ -16,7 +16,8 @@ from steerkit.angles import difference_kernel
 from steerkit.compiled import kernel
 from steerkit.memory_row import SILENT, SLOWEST, WATCH_HEADING, WATCH_PATH, WATCH_TIME, WATCH_TURN, WATCH_X, WATCH_Y
 
-SILENT_PERIODS = 7.0  # without an answer, besides dead time and lag
+SILENT_PERIODS, SILENT_TIME = 7.0, 0.5  # without an answer: the longer of periods and s, besides dead time and lag
+LEAST_DUE = 0.02  # m of the wheels: less is not waited for
 RAISE = 1.1
 FIRST = 0.01  # of the top speed: the first smallest speed of a robot that declared none
 LEAST = 1e-3  # of the smallest speed; below it a lag dies away
@@ -28,7 +29,7 @@ BLUR = 4.0 * math.sqrt(2.0)  # standard deviations of a pose
 def watch_kernel(
     memory: Sequence[float],
     out: list[float],
-    posed: bool,
+    fresh: bool,
     x: float,
     y: float,
     heading: float,
@@ -43,23 +44,25 @@ def watch_kernel(
 ) -> bool:
     """Write the watch to the memory, the smallest speed raised where it is due; say whether the robot does not answer.
 
+    `fresh`: the pose is a new one; one that is repeated or carried answers nothing.
+
     (v, w): the motion that the model expects at the pose; `blur`: noise of a pose as a path of the wheels (m).
     """
     slowest, silent = memory[SLOWEST], memory[SILENT]
     path, turn, time = memory[WATCH_PATH], memory[WATCH_TURN], memory[WATCH_TIME]
     at_x, at_y, at_heading = memory[WATCH_X], memory[WATCH_Y], memory[WATCH_HEADING]
-    if posed and at_x != at_x:
+    if fresh and at_x != at_x:
         at_x, at_y, at_heading = x, y, heading
-    if posed:
+    told = abs(v) + abs(w) * half_track
+    if told > LEAST * max(slowest, FIRST * top):
+        path, turn, time = path + v * since, turn + w * since, time + since
+    if fresh:
         dx, dy = x - at_x, y - at_y
         seen = math.sqrt(dx * dx + dy * dy) + abs(difference_kernel(heading, at_heading)) * half_track
-        told = abs(v) + abs(w) * half_track
-        if told > LEAST * max(slowest, FIRST * top):
-            path, turn, time = path + v * since, turn + w * since, time + since
         due = abs(path) + abs(turn) * half_track
         if seen > max(BLUR * blur, SEEN * due):
             at_x, at_y, at_heading, path, turn, time, silent = x, y, heading, 0.0, 0.0, 0.0, 0.0
-        elif time > patience and due > max(2.0 * BLUR * blur, 0.5 * patience * slowest):
+        elif time > patience and due > max(2.0 * BLUR * blur, 0.5 * patience * slowest, LEAST_DUE):
             path, turn, time, silent = 0.0, 0.0, 0.0, 1.0
             if told <= max(most, slowest):  # else no dead band is as wide
                 slowest = min(max(RAISE * slowest, FIRST * top, told), max(most, slowest))

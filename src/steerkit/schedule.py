@@ -108,7 +108,8 @@ def schedule_kernel(
     this time constant. `on_the_spot`: no driving while the goal is off. Where it is within the disc steered at, both are 0.
     """
     b, al = SHARE * braking, SHARE * turn_acceleration
-    peak = peak_speed_kernel(distance - target_radius, v0, top, acceleration, braking)
+    least_v0 = max(v0, slowest)  # wheels go from 0 to the slowest speed at once: the same answer before and after
+    peak = max(least_v0, peak_speed_kernel(distance - target_radius, least_v0, top, acceleration, braking))
     near = min(1.0, max(0.0, 2.0 - distance / capture_radius))
     aim = target_radius * (AIM + (AIM_NEAR - AIM) * near)
     if distance > 0.0:
@@ -134,7 +135,7 @@ def schedule_kernel(
     speed = entering_kernel(way, passing, b, period, top)
     why = FREE if speed >= top else BRAKING
     quick = min(turn, max(abs(w0), math.sqrt(al * off)))
-    ahead = min(PI, PI / 2.0 + LEAD * quick * max(0.0, peak - v0) / (2.0 * acceleration))
+    ahead = min(PI, PI / 2.0 + LEAD * quick * max(0.0, peak - least_v0) / (2.0 * acceleration))
     cap = 0.0
     if off <= max(LEAST_GATE, ahead - math.atan2(peak / quick, far)) and not on_the_spot:
         left = turn_time_kernel(off, w0 * side, al, turn) + period

@@ -121,8 +121,8 @@ class Phase(IntEnum):
 
     ==================  ==================================================  ========
     told to hold        or: no usable pose, goal or clock                   HELD
-    neither             at rest (command 0, wheels < 1 cm/s) in the disc    ARRIVED
     neither             a way point's disc is touched, or will surely be    PASSED
+    neither             at rest (command 0, wheels < 1 cm/s) in the disc    ARRIVED
     neither             else                                                DRIVING
     ==================  ==================================================  ========
 

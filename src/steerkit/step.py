@@ -13,7 +13,7 @@ import math
 from collections.abc import Sequence
 
 from steerkit.angles import difference_kernel
-from steerkit.answering import SILENT_PERIODS, watch_kernel
+from steerkit.answering import SILENT_PERIODS, SILENT_TIME, watch_kernel
 from steerkit.approach import ON_THE_WAY, bearing_kernel, constant_speed_kernel
 from steerkit.compiled import kernel
 from steerkit.heading import heading_rate_kernel, integrate_kernel, steer_kernel
@@ -27,7 +27,7 @@ from steerkit.intake import (
     pose_kernel,
     seen_kernel,
 )
-from steerkit.kinematics import arc_kernel, wheels_kernel
+from steerkit.kinematics import wheels_kernel
 from steerkit.limits import ROUNDING, clip_kernel, limit_kernel, turn_first_kernel
 from steerkit.memory_row import (
     BASE_AGE,
@@ -46,6 +46,7 @@ from steerkit.memory_row import (
     PROGRESS,
     RAMP_SPEED,
     RAMP_TURN_RATE,
+    SILENT,
     SLOWEST,
     STAYS,
     TIME,
@@ -57,7 +58,7 @@ from steerkit.memory_row import (
     sound_kernel,
     usable_kernel,
 )
-from steerkit.prediction import carry_kernel, coast_kernel, motion_then_kernel
+from steerkit.prediction import carry_kernel, coast_kernel, hold_kernel, motion_then_kernel
 from steerkit.schedule import BRAKING, FREE, circling_kernel, passing_kernel, schedule_kernel, stops_kernel
 from steerkit.signals import HEAD, Causes, Phase, Slowing
 from steerkit.wheel_grid import on_grid_kernel, slowest_kernel
@@ -93,10 +94,23 @@ def turning_on_kernel(error: float, w: float, blur: float) -> float:
 
 
 @kernel
-def touched_kernel(x: float, y: float, heading: float, v: float, w: float, span: float, x1: float, y1: float, near: float) -> bool:
-    """Say whether the path of a motion held for `span` comes within `near` of a point: four chords of the arc."""
+def touched_kernel(
+    x: float,
+    y: float,
+    heading: float,
+    v: float,
+    w: float,
+    command_v: float,
+    command_w: float,
+    span: float,
+    lag: float,
+    x1: float,
+    y1: float,
+    near: float,
+) -> bool:
+    """Say whether the path under a command held for `span` comes within `near` of a point: four chords of it."""
     for _ in range(4):
-        x2, y2, heading = arc_kernel(x, y, heading, v, w, 0.25 * span)
+        x2, y2, heading, v, w = hold_kernel(x, y, heading, v, w, command_v, command_w, 0.25 * span, lag)
         dx, dy = x2 - x, y2 - y
         long = dx * dx + dy * dy
         share = clip_kernel(((x1 - x) * dx + (y1 - y) * dy) / long, 0.0, 1.0) if long > 0.0 else 0.0
@@ -105,6 +119,13 @@ def touched_kernel(x: float, y: float, heading: float, v: float, w: float, span:
             return True
         x, y = x2, y2
     return False
+
+
+@kernel
+def passed_within_kernel(settings: Sequence[float], v: float) -> float:
+    """Return how far away (m, squared) a way point can be that was just passed, or is about to be touched."""
+    far = settings[13] + max(v, 0.0) * (settings[1] + settings[2] + 3.0 * settings[0])
+    return far * far
 
 
 @kernel
@@ -281,18 +302,29 @@ def step_kernel(settings: Sequence[float], memory: Sequence[float], measured: Se
         span = abs(memory[POSE_AGE] + since - age) + period
         fastest_v, fastest_w = max(abs(v), abs(last_v)), max(abs(w), abs(last_w))
         jumped = jumped_kernel(memory, settings, x, y, heading, span, fastest_v, fastest_w)
+    # A pose that is carried on for want of a new one makes nothing faster.
+    most = cruise
+    top = min(top, limit)
+    if pose_trouble != 0:
+        top = min(top, max(last_v, 0.0))
     blur = settings[11] + settings[12] * half_track
-    patience = SILENT_PERIODS * period + dead_time + lag
-    posed = pose_trouble == 0 and not local
-    if watch_kernel(memory, out, posed, x, y, heading, told_v, told_w, since, blur, half_track, patience, top, settings[29]):
+    patience = max(SILENT_PERIODS * period, SILENT_TIME) + dead_time + lag
+    fresh = pose_trouble == 0 and not local and not age > memory[POSE_AGE] + since - 1e-9
+    if watch_kernel(
+        memory, out, fresh, x, y, heading, told_v, told_w, since, blur, half_track, patience, most, min(settings[29], top)
+    ):
         causes |= NO_ANSWER
-    slowest = slowest_kernel(out[SLOWEST], settings[28])
+    slowest = slowest_kernel(max(settings[27], min(out[SLOWEST], settings[29], top)), settings[28])
     goal_x, goal_y, aimed, new_goal, moved = goal_kernel(memory, measured, x, y, heading, local, capture_radius)
     next_x, next_y, trouble = next_goal_kernel(measured, x, y, heading)
     causes |= trouble
     given_x, given_y = goal_x, goal_y
     way_point = aimed and next_x == next_x
-    passed = way_point and memory[PROGRESS] == PASSED and moved <= max(stay_radius - capture_radius, SAME * capture_radius)
+    passed = memory[PROGRESS] == PASSED and moved <= max(stay_radius - capture_radius, SAME * capture_radius)
+    if passed and local:  # a sighted goal farther than a way point just passed can be is another
+        passed = measured[5] * measured[5] + measured[6] * measured[6] <= passed_within_kernel(settings, v)
+    was_passed = passed and not way_point and trouble != 0
+    passed = passed and way_point
     if passed:
         goal_x, goal_y, way_point = next_x, next_y, False
     if jumped:
@@ -318,22 +350,21 @@ def step_kernel(settings: Sequence[float], memory: Sequence[float], measured: Se
     stood = memory[STAYS] != 0.0 and not new_goal
     same_place = moved <= stay_radius - capture_radius
     stays = stood and distance <= (stay_radius if same_place else capture_radius) and not way_point
-    # A pose that is carried on for want of a new one makes nothing faster.
-    most = cruise
-    top = min(top, limit)
-    if pose_trouble != 0:
-        top = min(top, max(last_v, 0.0))
-    integral, before, progress, why = 0.0, nan, PASSED if passed else ON_THE_WAY, FREE
+    kept = not aimed and memory[PROGRESS] == PASSED
+    integral, before, progress, why = 0.0, nan, PASSED if passed or was_passed or kept else ON_THE_WAY, FREE
     asked, wanted_v, wanted_w, stopping = 0.0, 0.0, 0.0, True
-    then_x, then_y, then_heading = nan, nan, nan
+    then_x, then_y, then_heading, from_x, from_y, from_heading = nan, nan, nan, nan, nan, nan
     settled, turned, nearest = rest_radius, 0.0, nan
     if not held:
         then_x, then_y, then_heading, v, w = carry_kernel(
             memory, HEAD, rows, since, last_v, last_w, dead_time, lag, 0.0, dead_time, now_x, now_y, now_heading, v, w
         )
+        from_x, from_y, from_heading = then_x, then_y, then_heading
         then_x, then_y, then_heading = coast_kernel(then_x, then_y, then_heading, v, w, lag)
+        away, bearing = bearing_kernel(from_x, from_y, goal_x, goal_y)
+        passes = way_point and away <= stop_radius
         away, bearing = bearing_kernel(then_x, then_y, goal_x, goal_y)
-        if way_point and away <= stop_radius:
+        if passes:
             progress, way_point, goal_x, goal_y = PASSED, False, next_x, next_y
             away, bearing = bearing_kernel(then_x, then_y, goal_x, goal_y)
             distance, _ = bearing_kernel(now_x, now_y, goal_x, goal_y)
@@ -413,20 +444,26 @@ def step_kernel(settings: Sequence[float], memory: Sequence[float], measured: Se
     v1, w1, ramp_v, ramp_w = on_grid_kernel(ramp_v, ramp_w, wanted_v, wanted_w, slowest, settings[28], top, turn, wheel, half_track)
     if wanted_v != 0.0 and integral_time < math.inf:
         integral = clip_kernel(integrate_kernel(integral, error, asked, w1, share), -FAR, FAR)
-    if way_point and not held and touched_kernel(then_x, then_y, then_heading, v1, w1, period, goal_x, goal_y, stop_radius):
+    if (
+        way_point
+        and not held
+        and touched_kernel(from_x, from_y, from_heading, v, w, v1, w1, period, lag, goal_x, goal_y, stop_radius)
+    ):
         progress = PASSED
     phase = DRIVING
     if held:
         phase = HELD
-    elif v1 == 0.0 and w1 == 0.0 and rest and not way_point and (stays or distance <= settled):
-        phase = ARRIVED
     elif progress == PASSED:
         phase = GONE_BY
+    elif v1 == 0.0 and w1 == 0.0 and rest and not way_point and (stays or distance <= settled):
+        phase = ARRIVED
 
     remember_kernel(memory, out, rows, since, last_v, last_w, dead_time, lag, stale_after, v1, w1)
     out[TIME] = time if usable_kernel(time, FAR) else memory[TIME] + period
     out[X], out[Y], out[HEADING], out[POSE_AGE] = (nan, nan, nan, math.inf) if local else (x, y, heading, age)
     out[RAMP_SPEED], out[RAMP_TURN_RATE] = ramp_v, ramp_w
+    if (held or phase == ARRIVED) and v1 == 0.0 and w1 == 0.0:
+        out[SILENT] = 0.0  # told to stand: there is nothing to answer
     stays = phase == ARRIVED or (stood if held else stays)
     if aimed and not (stays and stood):
         out[GOAL_X], out[GOAL_Y], out[GOAL_LOCAL] = (nan, nan, 1.0) if local else (given_x, given_y, 0.0)

@@ -35,7 +35,7 @@ def choice_kernel(i: int, ramp: float, other: float, slowest: float, step: float
         return given if abs(given - ramp) <= (slowest + step) * (1.0 + CLOSE) else math.nan
     aim = min(max(ramp, low), high) if i >= 3 else ramp
     if not step > 0.0:
-        return aim if i == 0 or i == 3 else math.nan
+        return aim if (i == 0 or i == 3) and abs(aim) >= slowest * (1.0 - CLOSE) else math.nan
     steps = aim / step
     near = math.floor(steps + CLOSE) if i == 0 or i == 3 else math.ceil(steps - CLOSE)
     given = step * near
