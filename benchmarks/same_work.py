@@ -43,11 +43,11 @@ from steerkit.controller import InPlace
 from steerkit.intake import BELIEVED, MEASURED
 from steerkit.kinematics import arc_kernel, to_robot_kernel
 from steerkit.limits import limit_kernel, turn_first_kernel
-from steerkit.memory_row import HEAD, SILENT, SLOWEST, TIME, WATCH_HEADING, WATCH_TIME, WATCH_X
+from steerkit.memory_row import HEAD, PROGRESS, SILENT, SLOWEST, TIME, WATCH_HEADING, WATCH_PATH, WATCH_TIME, WATCH_TURN, WATCH_X
 from steerkit.prediction import stop_end_kernel
 from steerkit.schedule import cut_stop_kernel, schedule_kernel, stops_kernel
 from steerkit.settings import Settings
-from steerkit.step import RESULT, step_kernel
+from steerkit.step import PASSED, RESULT, step_kernel
 from steerkit.wheel_grid import on_grid_kernel
 
 sys.path.insert(0, str(Path(__file__).resolve().parent.parent / "tests"))
@@ -259,14 +259,15 @@ class World:
             row[10] = rng.uniform(-0.1, 0.5) * rng.choice((1.0, 0.1))
         if self.rarely(0.05):
             row[12], row[13] = rng.normal(0.0, 0.5, 2) if rng.random() < 0.8 else (0.1, math.nan)
+        often = 10.0 if self.memory[PROGRESS] == PASSED else 1.0  # what follows a way point passed
         for share, place, values in (
             (0.05, 1, (math.nan, 1e13, row[1] + 3.0)),
             (0.05, 3, (math.nan, row[3] + 2.0, row[3] + 1e3, math.pi, -math.pi)),
-            (0.05, 5, (math.nan, -math.inf, row[5] + rng.normal())),
+            (0.05 * often, 5, (math.nan, -math.inf, row[5] + rng.normal())),
             (0.01, 7, (2.0, math.nan)),
             (0.03, 0, (math.nan, row[0] - 1.0, row[0] + 0.4 * s.period, self.memory[TIME] + 5e-7, row[0] + 100.0)),
             (0.04, 11, (1.0, math.nan)),
-            (0.02, 15, (math.nan, 1e13, row[15] + rng.normal())),
+            (0.02 * often, 15, (math.nan, 1e13, row[15] + rng.normal())),
             (0.02, 16, (1.0,)),
         ):
             if self.rarely(share):
@@ -312,8 +313,15 @@ def parts(rng: np.random.Generator) -> Iterator[tuple[str, Any, Array]]:
     memory = rng.normal(0.0, 0.3, HEAD)
     memory[[SLOWEST, WATCH_TIME, SILENT]] = rng.uniform(0.0, 0.2), rng.uniform(0.0, 2.0), rng.integers(2)
     pose = memory[WATCH_X : WATCH_HEADING + 1] + rng.normal(0.0, rng.choice((0.02, 0.3)), 3)
-    seen = [*rng.normal(0.0, 0.3, 2), *rng.uniform(0.0, 0.05, 2), *rng.uniform(0.1, 1.0, 3), rng.uniform(0.0, 0.3)]
-    yield "watch_alone", watched, np.concatenate([memory, [1.0], pose, seen])
+    memory[[WATCH_PATH, WATCH_TURN]] *= rng.choice((1.0, 0.05))  # little due
+    seen = [
+        *rng.normal(0.0, 0.3, 2),
+        rng.uniform(0.0, 0.05),
+        rng.uniform(0.0, 0.05) * rng.integers(2),
+        *rng.uniform(0.1, 1.0, 3),
+        rng.uniform(0.0, 0.3),
+    ]
+    yield "watch_alone", watched, np.concatenate([memory, [float(rng.random() < 0.9)], pose, seen])
 
 
 def scheduled(*numbers: float) -> tuple[float, float, float]:
@@ -323,10 +331,10 @@ def scheduled(*numbers: float) -> tuple[float, float, float]:
 
 def watched(*numbers: float) -> list[float]:
     """Return the memory after a watch."""
-    memory, posed, *seen = np.array(numbers[:HEAD]), bool(numbers[HEAD]), *numbers[HEAD + 1 :]
+    memory, fresh, *seen = np.array(numbers[:HEAD]), bool(numbers[HEAD]), *numbers[HEAD + 1 :]
     out = memory.copy()
     memory.setflags(write=False)
-    watch_kernel(memory, out, posed, *seen)
+    watch_kernel(memory, out, fresh, *seen)
     return out.tolist()
 
 

@@ -29,7 +29,11 @@
     ONE(WATCH_SILENT) ONE(WATCH_RAISED) ONE(WATCH_NOT_RAISED) ONE(WATCH_WAITS) ONE(TURN_FIRST_FREE) ONE(TURN_FIRST_TURN) \
     ONE(TURN_FIRST_WHEELS) ONE(TURN_FIRST_ROOM) ONE(NEXT_GOAL_NONE) ONE(NEXT_GOAL_BAD) ONE(NEXT_GOAL_ROBOT) \
     ONE(NEXT_GOAL_WORLD) ONE(PASSED_BEFORE) ONE(PASSED_BY_COMMITTED) ONE(PASSED_BY_TOUCH) ONE(TOUCH_MISSED) ONE(SETTLING_IN) \
-    ONE(STAYING) ONE(TOO_SLOW_A_STEP) ONE(SCHEDULE_LAW) ONE(CONSTANT_LAW) ONE(CONSTANT_WAY_POINT)
+    ONE(STAYING) ONE(TOO_SLOW_A_STEP) ONE(SCHEDULE_LAW) ONE(CONSTANT_LAW) ONE(CONSTANT_WAY_POINT) \
+    ONE(SCHEDULE_FROM_BAND) ONE(CHOICE_NO_STEP_TOO_SLOW) ONE(WATCH_REPEATED) ONE(WATCH_LITTLE_DUE) ONE(PATIENCE_TIME) \
+    ONE(PATIENCE_PERIODS) ONE(SLOWEST_RAISED) ONE(SLOWEST_CAPPED_BY_SETTING) ONE(SLOWEST_CAPPED_BY_STEP) \
+    ONE(SIGHTED_SAME) ONE(SIGHTED_OTHER) ONE(PASSED_NEXT_BAD) ONE(PASSED_GOAL_BAD) ONE(PASSED_AT_REST) \
+    ONE(SILENT_CLEARED_HELD) ONE(SILENT_CLEARED_ARRIVED) ONE(TOUCH_BEHIND_LAG)
 #ifdef COUNTING
 #define NAMED(name) BRANCH_##name,
 #define WRITTEN(name) #name " "
@@ -173,7 +177,6 @@ static Limited turn_first(
     int bound = 0;
     Point range = reach(before.v, faster, slower);
     double low = range.x, high = range.y;
-    low = most(low, least(0.0, high));
     double least_v = most(most(0.0, low), -high);
     double least_w = most(0.0, fabs(before.w) - turning);
     double w1 = clip(w, before.w - turning, before.w + turning);
@@ -440,7 +443,10 @@ static Wanted schedule(
     double half_track, bool on_the_spot)
 {
     double b = SCHEDULE_SHARE * braking, al = SCHEDULE_SHARE * turn_acceleration;
-    double peak = peak_speed(distance - target_radius, v0, top, acceleration, braking);
+    double least_v0 = most(v0, slowest);
+    if (v0 < slowest)
+        ENTER(SCHEDULE_FROM_BAND);
+    double peak = most(least_v0, peak_speed(distance - target_radius, least_v0, top, acceleration, braking));
     double near = least(1.0, most(0.0, 2.0 - distance / capture_radius));
     double aim = target_radius * (SCHEDULE_AIM + (SCHEDULE_AIM_NEAR - SCHEDULE_AIM) * near);
     if (distance > 0.0)
@@ -475,7 +481,7 @@ static Wanted schedule(
     double why = speed >= top ? SCHEDULE_FREE : SCHEDULE_BRAKING;
     double quick = least(turn, most(fabs(w0), sqrt(al * off)));
     double ahead = least(
-        SCHEDULE_PI, SCHEDULE_PI / 2.0 + SCHEDULE_LEAD * quick * most(0.0, peak - v0) / (2.0 * acceleration));
+        SCHEDULE_PI, SCHEDULE_PI / 2.0 + SCHEDULE_LEAD * quick * most(0.0, peak - least_v0) / (2.0 * acceleration));
     double cap = 0.0;
     if (off <= most(SCHEDULE_LEAST_GATE, ahead - atan2(peak / quick, far)) && !on_the_spot) {
         double left = turn_time(off, w0 * side, al, turn) + period;
@@ -595,7 +601,9 @@ static double choice(int i, double ramp, double slowest, double step, double low
     double aim = i >= 3 ? least(most(ramp, low), high) : ramp;
     if (!(step > 0.0)) {
         ENTER(CHOICE_NO_STEPS);
-        return i == 0 || i == 3 ? aim : NAN;
+        if ((i == 0 || i == 3) && !(fabs(aim) >= slowest * (1.0 - WHEEL_GRID_CLOSE)))
+            ENTER(CHOICE_NO_STEP_TOO_SLOW);
+        return (i == 0 || i == 3) && fabs(aim) >= slowest * (1.0 - WHEEL_GRID_CLOSE) ? aim : NAN;
     }
     double steps = aim / step;
     if (i == 0 || i == 3)
@@ -764,33 +772,34 @@ static void remember(const double *memory, double *out, const Commands *c, doubl
 /* answering */
 
 static bool watch(
-    const double *memory, double *out, bool posed, Pose p, Motion told, double since, double blur, double half_track,
+    const double *memory, double *out, bool new_pose, Pose p, Motion told, double since, double blur, double half_track,
     double patience, double top, double highest)
 {
     double slowest = memory[SLOWEST], silent = memory[SILENT];
     double path = memory[WATCH_PATH], turn = memory[WATCH_TURN], time = memory[WATCH_TIME];
     Pose at = {memory[WATCH_X], memory[WATCH_Y], memory[WATCH_HEADING]};
-    if (posed && at.x != at.x) {
+    if (new_pose && at.x != at.x) {
         ENTER(WATCH_BEGINS);
         at = p;
     }
-    if (posed) {
+    double wheel = fabs(told.v) + fabs(told.w) * half_track;
+    if (wheel > ANSWERING_LEAST * most(slowest, ANSWERING_FIRST * top)) {
+        ENTER(WATCH_TOLD);
+        path += told.v * since;
+        turn += told.w * since;
+        time += since;
+    } else
+        ENTER(WATCH_NOT_TOLD);
+    if (new_pose) {
         double dx = p.x - at.x, dy = p.y - at.y;
         double seen = sqrt(dx * dx + dy * dy) + fabs(difference(p.heading, at.heading)) * half_track;
-        double wheel = fabs(told.v) + fabs(told.w) * half_track;
-        if (wheel > ANSWERING_LEAST * most(slowest, ANSWERING_FIRST * top)) {
-            ENTER(WATCH_TOLD);
-            path += told.v * since;
-            turn += told.w * since;
-            time += since;
-        } else
-            ENTER(WATCH_NOT_TOLD);
         double due = fabs(path) + fabs(turn) * half_track;
         if (seen > most(ANSWERING_BLUR * blur, ANSWERING_SEEN * due)) {
             ENTER(WATCH_ANSWERED);
             at = p;
             path = turn = time = silent = 0.0;
-        } else if (time > patience && due > most(2.0 * ANSWERING_BLUR * blur, 0.5 * patience * slowest)) {
+        } else if (time > patience
+                   && due > most(most(2.0 * ANSWERING_BLUR * blur, 0.5 * patience * slowest), ANSWERING_LEAST_DUE)) {
             ENTER(WATCH_SILENT);
             path = turn = time = 0.0;
             silent = 1.0;
@@ -800,8 +809,11 @@ static bool watch(
                     most(most(ANSWERING_RAISE * slowest, ANSWERING_FIRST * top), wheel), most(highest, slowest));
             } else
                 ENTER(WATCH_NOT_RAISED);
-        } else
+        } else {
             ENTER(WATCH_WAITS);
+            if (time > patience && due > most(2.0 * ANSWERING_BLUR * blur, 0.5 * patience * slowest))
+                ENTER(WATCH_LITTLE_DUE);
+        }
     } else
         ENTER(WATCH_BLIND);
     out[SLOWEST] = slowest;
@@ -919,10 +931,12 @@ static double turning_on(double error, double w, double blur)
     return error;
 }
 
-static bool touched(Pose p, double v, double w, double span, double x1, double y1, double near)
+static bool touched(Pose p, Motion motion, Motion command, double span, double lag, double x1, double y1, double near)
 {
     for (int i = 0; i < 4; i++) {
-        Pose q = arc(p, v, w, 0.25 * span);
+        Moving next = hold(p, motion, command, 0.25 * span, lag);
+        Pose q = next.pose;
+        motion = next.motion;
         double dx = q.x - p.x, dy = q.y - p.y;
         double square = dx * dx + dy * dy;
         double share = square > 0.0 ? clip(((x1 - p.x) * dx + (y1 - p.y) * dy) / square, 0.0, 1.0) : 0.0;
@@ -931,6 +945,12 @@ static bool touched(Pose p, double v, double w, double span, double x1, double y
         p = q;
     }
     return false;
+}
+
+static double passed_within(const double *s, double v)
+{
+    double far = s[S_CAPTURE_RADIUS] + most(v, 0.0) * (s[S_DEAD_TIME] + s[S_MOTOR_LAG] + 3.0 * s[S_PERIOD]);
+    return far * far;
 }
 
 static Wanted scheduled(
@@ -1048,18 +1068,49 @@ void step_apart(const double *settings, const double *memory, long size, const d
         double fastest_v = most(fabs(motion.v), fabs(last.v)), fastest_w = most(fabs(motion.w), fabs(last.w));
         jumped = jumped_to(memory, settings, posed.pose, span, fastest_v, fastest_w);
     }
+    double fastest = cruise;
+    top = least(top, seen.limit);
+    if (posed.trouble != 0)
+        top = least(top, most(last.v, 0.0));
     double blur = s[S_POSITION_NOISE] + s[S_HEADING_NOISE] * half_track;
-    double patience = ANSWERING_SILENT_PERIODS * period + dead_time + lag;
-    if (watch(memory, out, located, posed.pose, told, since, blur, half_track, patience, top, s[S_MOST_RAISED]))
+    if (ANSWERING_SILENT_PERIODS * period < ANSWERING_SILENT_TIME)
+        ENTER(PATIENCE_TIME);
+    else
+        ENTER(PATIENCE_PERIODS);
+    double patience = most(ANSWERING_SILENT_PERIODS * period, ANSWERING_SILENT_TIME) + dead_time + lag;
+    bool new_pose = located && !(age > memory[POSE_AGE] + since - 1e-9);
+    if (located && !new_pose)
+        ENTER(WATCH_REPEATED);
+    double most_raised = least(s[S_MOST_RAISED], top);
+    if (watch(memory, out, new_pose, posed.pose, told, since, blur, half_track, patience, fastest, most_raised))
         causes |= NO_ANSWER;
-    double slowest = slowest_of(out[SLOWEST], s[S_WHEEL_SPEED_STEP]);
+    double slowest = least(least(out[SLOWEST], s[S_MOST_RAISED]), top);
+    if (slowest > s[S_SMALLEST_WHEEL_SPEED])
+        ENTER(SLOWEST_RAISED);
+    if (slowest < least(out[SLOWEST], top))
+        ENTER(SLOWEST_CAPPED_BY_SETTING);
+    if (slowest < least(out[SLOWEST], s[S_MOST_RAISED]))
+        ENTER(SLOWEST_CAPPED_BY_STEP);
+    slowest = slowest_of(most(s[S_SMALLEST_WHEEL_SPEED], slowest), s[S_WHEEL_SPEED_STEP]);
     Goal goal = goal_of(memory, measured, posed.pose, posed.local, capture_radius);
     Next next = next_goal(measured, posed.pose);
     causes |= next.trouble;
     Point given = goal.point;
     bool way_point = goal.aimed && next.point.x == next.point.x;
-    bool passed = way_point && memory[PROGRESS] == STEP_PASSED
+    bool passed = memory[PROGRESS] == STEP_PASSED
         && goal.moved <= most(stay_radius - capture_radius, STEP_SAME * capture_radius);
+    if (passed && posed.local) {
+        double ahead = measured[M_GOAL_X], left = measured[M_GOAL_Y];
+        passed = ahead * ahead + left * left <= passed_within(settings, motion.v);
+        if (passed)
+            ENTER(SIGHTED_SAME);
+        else
+            ENTER(SIGHTED_OTHER);
+    }
+    bool was_passed = passed && !way_point && next.trouble != 0;
+    if (was_passed)
+        ENTER(PASSED_NEXT_BAD);
+    passed = passed && way_point;
     if (passed) {
         ENTER(PASSED_BEFORE);
         goal.point = next.point;
@@ -1088,20 +1139,21 @@ void step_apart(const double *settings, const double *memory, long size, const d
     bool stood = memory[STAYS] != 0.0 && !goal.fresh;
     bool same_place = goal.moved <= stay_radius - capture_radius;
     bool stays = stood && distance <= (same_place ? stay_radius : capture_radius) && !way_point;
-    double fastest = cruise;
-    top = least(top, seen.limit);
-    if (posed.trouble != 0)
-        top = least(top, most(last.v, 0.0));
-    double integral = 0.0, heading_before = NAN, progress = passed ? STEP_PASSED : APPROACH_ON_THE_WAY, why = SCHEDULE_FREE;
+    bool kept = !goal.aimed && memory[PROGRESS] == STEP_PASSED;
+    if (kept)
+        ENTER(PASSED_GOAL_BAD);
+    double integral = 0.0, heading_before = NAN, why = SCHEDULE_FREE;
+    double progress = passed || was_passed || kept ? STEP_PASSED : APPROACH_ON_THE_WAY;
     double asked = 0.0, wanted_v = 0.0, wanted_w = 0.0, settled = rest_radius, turned = 0.0, nearest = NAN;
     bool stopping = true;
-    Pose end = {NAN, NAN, NAN};
+    Moving then = {{NAN, NAN, NAN}, motion};
     if (!held) {
-        Moving then = carry(&under_way, 0.0, dead_time, now.pose, now.motion);
-        end = arc(then.pose, then.motion.v, then.motion.w, lag);
+        then = carry(&under_way, 0.0, dead_time, now.pose, now.motion);
+        Pose end = arc(then.pose, then.motion.v, then.motion.w, lag);
+        bool passes = way_point && distance_to(then.pose.x, then.pose.y, goal.point.x, goal.point.y) <= stop_radius;
         double away = distance_to(end.x, end.y, goal.point.x, goal.point.y);
         double bearing = bearing_to(end.x, end.y, goal.point.x, goal.point.y);
-        if (way_point && away <= stop_radius) {
+        if (passes) {
             ENTER(PASSED_BY_COMMITTED);
             progress = STEP_PASSED;
             way_point = false;
@@ -1183,8 +1235,10 @@ void step_apart(const double *settings, const double *memory, long size, const d
     if (wanted_v != 0.0 && integral_time < INFINITY)
         integral = clip(integrate(integral, error, asked, command.w, share), -FAR, FAR);
     if (way_point && !held) {
-        if (touched(end, command.v, command.w, period, goal.point.x, goal.point.y, stop_radius)) {
+        if (touched(then.pose, then.motion, command, period, lag, goal.point.x, goal.point.y, stop_radius)) {
             ENTER(PASSED_BY_TOUCH);
+            if (lag > 0.0)
+                ENTER(TOUCH_BEHIND_LAG);
             progress = STEP_PASSED;
         } else
             ENTER(TOUCH_MISSED);
@@ -1192,10 +1246,12 @@ void step_apart(const double *settings, const double *memory, long size, const d
     int phase = PHASE_DRIVING;
     if (held)
         phase = PHASE_HELD;
-    else if (command.v == 0.0 && command.w == 0.0 && rest && !way_point && (stays || distance <= settled))
-        phase = PHASE_ARRIVED;
-    else if (progress == STEP_PASSED)
+    else if (progress == STEP_PASSED) {
         phase = PHASE_PASSED;
+        if (command.v == 0.0 && command.w == 0.0 && rest && !way_point && (stays || distance <= settled))
+            ENTER(PASSED_AT_REST);
+    } else if (command.v == 0.0 && command.w == 0.0 && rest && !way_point && (stays || distance <= settled))
+        phase = PHASE_ARRIVED;
 
     /* The new memory; out may be memory, so each place is read before it is written. */
     remember(memory, out, &under_way, stale_after, command.v, command.w);
@@ -1206,6 +1262,13 @@ void step_apart(const double *settings, const double *memory, long size, const d
     out[POSE_AGE] = posed.local ? INFINITY : age;
     out[RAMP_SPEED] = sent.ramp.v;
     out[RAMP_TURN_RATE] = sent.ramp.w;
+    if ((held || phase == PHASE_ARRIVED) && command.v == 0.0 && command.w == 0.0) {
+        if (out[SILENT] != 0.0 && held)
+            ENTER(SILENT_CLEARED_HELD);
+        else if (out[SILENT] != 0.0)
+            ENTER(SILENT_CLEARED_ARRIVED);
+        out[SILENT] = 0.0;
+    }
     stays = phase == PHASE_ARRIVED || (held ? stood : stays);
     bool aims = goal.aimed && !(stays && stood);
     out[GOAL_X] = aims ? (posed.local ? NAN : given.x) : memory[GOAL_X];

@@ -308,7 +308,7 @@ def test_a_way_point_within_the_disc_of_the_one_before_is_touched_too():
 
 def test_passed_too_early_or_too_late_is_seen():
     points = ride.waypoints()[:200]
-    early = touches(drive_through(follower(5.0).unchecked(stop_radius=5.5), points), CARRIAGE, points, 5.0)
+    early = touches(drive_through(follower(5.0).unchecked(stop_radius=8.0), points), CARRIAGE, points, 5.0)
     assert np.nanmax(early.left) > 0.0 or np.isnan(early.touched).any()
     unaware = follower(5.0).unchecked(dead_time=0.0, motor_lag=0.0, stop_radius=4.0)
     late = touches(drive_through(unaware, points), CARRIAGE, points, 5.0)

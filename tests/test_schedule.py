@@ -16,11 +16,12 @@ from hypothesis import strategies as st
 from robots import cart
 from rough_loop import COLUMNS, Truth, rough_drive, true_of
 from schedule_studies import Row, changing, common_draw, many, noise_of, noisy, wrong
-from steerkit import Causes, Controller, Measurement, Phase, Platform, Slowing, compiled
-from steerkit.kinematics import arc
+from steerkit import Causes, Controller, Frame, Measurement, Phase, Platform, Slowing, compiled
+from steerkit.kinematics import arc, to_robot
 from steerkit.schedule import cut_stop_kernel, passing_kernel, schedule_kernel, stops_kernel, turn_time_kernel
 from steerkit.shortest import straight_time
 from steerkit.wheel_grid import on_grid_kernel, slowest_kernel
+from test_ride import Robot as Carriage
 
 loops = pytest.mark.skipif(not compiled.ON, reason="closed loops over many robots want the compiler")
 T = 0.05
@@ -444,3 +445,123 @@ def test_whatever_is_wrong_with_the_numbers_it_does_not_circle_for_ever(scale):
     for distance in np.geomspace(0.101, 1.0, 25):
         got, _ = rough_drive(controller, truth, (distance, 0.0, 0.5 * math.pi), (0.4, 0.5), steps=2500)
         assert got.rest > 0.0, distance
+
+
+# What a reviewer broke
+
+
+@loops
+def test_a_dead_band_and_a_short_period_do_not_make_it_waver_between_spot_and_curve():
+    """Ramps of a turn are begun anew within the dead band: the choice between spot and curve must not depend on a single period."""
+    platform = Platform(
+        radius=0.1745,
+        track_width=0.1745,
+        wheel_speed_limit=1.93,
+        speed_limit=1.53,
+        turn_rate_limit=4.68,
+        acceleration=0.698,
+        braking=5.62,
+        turn_acceleration=1.067,
+        period=0.0054,
+        dead_time=0.0,
+        smallest_wheel_speed=0.0499,
+    )
+    controller, rng = Controller(platform, capture_radius=0.172), np.random.default_rng(1)
+    for place, heading in rng.uniform(-math.pi, math.pi, (100, 2)):
+        start = (1.55 * math.cos(place), 1.55 * math.sin(place), heading)
+        assert rough_drive(controller, true_of(platform), start, steps=6000)[0].rest > 0.0
+
+
+def test_a_smallest_speed_that_was_raised_is_never_above_the_limit_of_the_step():
+    controller = Controller(cart(dead_time=0.1), capture_radius=0.1)
+    memory, pose, under_way = controller.start(0.0), (0.0, 0.0, 0.0), [(0.0, 0.0)] * 2
+    for k in range(1200):
+        decision = controller.step(memory, Measurement(k * T, pose, (2.0, 0.0), speed_limit=0.05))
+        memory = decision.memory
+        under_way.append((decision.command.speed, decision.command.turn_rate))
+        motion = under_way.pop(0)
+        if not 3.0 < k * T < 8.0:  # blocked for a while
+            pose = tuple(arc(pose, motion, T))
+        assert decision.command.speed <= 0.05 * (1.0 + 1e-12)
+        if decision.phase == Phase.ARRIVED:
+            break
+    assert decision.phase == Phase.ARRIVED
+
+
+def test_a_wheel_at_the_limits_is_told_nothing_rather_than_too_little():
+    controller = Controller(cart(smallest_wheel_speed=0.12), capture_radius=0.1)
+    decision = controller.step(controller.start(0.0, (0.103439969, 0.916060468)), Measurement(0.0, (0, 0, 0), (2, 0), hold=True))
+    for wheel in decision.command[:2]:
+        assert wheel == 0.0 or abs(wheel) >= 0.12 * (1.0 - 1e-9)
+
+
+def test_where_discs_overlap_a_way_point_is_passed_and_not_arrived_at():
+    controller = Controller(cart(), capture_radius=0.1)
+    decision = controller.step(controller.start(0.0), Measurement(0.0, (0.05, 0, 0), (0, 0), next_goal=(0.1, 0)))
+    assert decision.phase == Phase.PASSED
+
+
+def test_a_pose_that_is_told_once_a_second_is_no_silence():
+    controller = Controller(cart(), capture_radius=0.1, stale_after=2.0)
+    memory, pose, seen, taken, log = controller.start(0.0), (0.0, 0.0, 0.0), (0.0, 0.0, 0.0), 0.0, []
+    for k in range(200):
+        if k % 20 == 0:
+            seen, taken = pose, k * T
+        decision = controller.step(memory, Measurement(k * T, seen, (4.0, 1.0), taken))
+        memory = decision.memory
+        pose = tuple(arc(pose, (decision.command.speed, decision.command.turn_rate), T))
+        log.append(decision)
+    assert not any(Causes.NO_ANSWER in one.causes for one in log)
+
+
+def test_a_silent_robot_that_is_told_to_stand_has_nothing_to_answer():
+    controller = Controller(cart(smallest_wheel_speed=0.03), capture_radius=0.1)
+    memory, told = controller.start(0.0), []
+    for k in range(200):
+        decision = controller.step(memory, Measurement(k * T, (0.0, 0.0, 0.0), (3.0, 1.0), hold=k >= 100))
+        memory = decision.memory
+        told.append(Causes.NO_ANSWER in decision.causes)
+    assert told[99]
+    assert not any(told[-50:])
+
+
+def test_sighted_way_points_are_each_driven_to():
+    """Without a pose the robot sees the points from where it is: (ahead, left)."""
+    controller = Controller(cart(dead_time=0.1), capture_radius=0.1)
+    points, pose, i = [(2.0, 0.0), (2.0, 2.0), (0.0, 2.0), (0.0, 0.0)], (0.0, 0.0, 0.0), 0
+    memory, under_way, nearest = controller.start(0.0), [(0.0, 0.0)] * 2, [math.inf] * 4
+    for k in range(1500):
+        then = to_robot(pose, points[i + 1]) if i < 3 else None
+        seen = Measurement(k * T, None, to_robot(pose, points[i]), goal_frame=Frame.ROBOT, next_goal=then)
+        decision = controller.step(memory, seen)
+        memory = decision.memory
+        under_way.append((decision.command.speed, decision.command.turn_rate))
+        pose = tuple(arc(pose, under_way.pop(0), T))
+        nearest = [min(near, math.dist(pose[:2], point)) for near, point in zip(nearest, points, strict=True)]
+        i += decision.phase == Phase.PASSED
+        if decision.phase == Phase.ARRIVED:
+            break
+    assert decision.phase == Phase.ARRIVED
+    assert max(nearest[:3]) <= 0.1 + 0.5 * T  # looked at once a period
+
+
+@loops
+def test_behind_a_long_lag_way_points_are_touched_too():
+    platform = cart(dead_time=0.1, motor_lag=0.5)
+    controller, rng = Controller(platform, capture_radius=0.2), np.random.default_rng(3)
+    for _ in range(10):
+        points = [tuple(one) for one in rng.uniform(-3.0, 3.0, (5, 2))]
+        robot, memory, i, near = Carriage(platform, (0.0, 0.0, 0.0)), controller.start(0.0), 0, [math.inf] * 5
+        for k in range(3000):
+            then = points[i + 1] if i < 4 else None
+            decision = controller.step(memory, Measurement(k * T, robot.state[:3], points[i], next_goal=then))
+            memory = decision.memory
+            acting, touch = robot.hold(decision.command[2:], points[i])
+            near[i] = min(near[i], touch)
+            for j in range(i):
+                near[j] = min(near[j], math.dist(acting[:2], points[j]), math.dist(robot.state[:2], points[j]))
+            i += decision.phase == Phase.PASSED
+            if decision.phase == Phase.ARRIVED:
+                break
+        assert decision.phase == Phase.ARRIVED
+        assert max(near) <= 0.2 + 0.01  # between the places looked at, which lie a few centimetres apart

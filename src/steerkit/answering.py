@@ -46,7 +46,7 @@ def watch_kernel(
 
     `fresh`: the pose is a new one; one that is repeated or carried answers nothing.
 
-    (v, w): the motion that the model expects at the pose; `blur`: noise of a pose as a path of the wheels (m).
+    (v, w): the motion that the model expects now; `blur`: noise of a pose as a path of the wheels (m).
     """
     slowest, silent = memory[SLOWEST], memory[SILENT]
     path, turn, time = memory[WATCH_PATH], memory[WATCH_TURN], memory[WATCH_TIME]

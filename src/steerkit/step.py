@@ -294,7 +294,9 @@ def step_kernel(settings: Sequence[float], memory: Sequence[float], measured: Se
         memory[BASE_SPEED],
         memory[BASE_TURN_RATE],
     )
-    told_v, told_w = v, w
+    told_v, told_w = motion_then_kernel(
+        memory, HEAD, rows, since, last_v, last_w, dead_time, lag, -min(age, stale_after), 0.0, v, w
+    )
     v = seen_v if seen_v == seen_v else v
     w = seen_w if seen_w == seen_w else w
     jumped = False
@@ -308,7 +310,7 @@ def step_kernel(settings: Sequence[float], memory: Sequence[float], measured: Se
     if pose_trouble != 0:
         top = min(top, max(last_v, 0.0))
     blur = settings[11] + settings[12] * half_track
-    patience = max(SILENT_PERIODS * period, SILENT_TIME) + dead_time + lag
+    patience = max(SILENT_PERIODS * period, SILENT_TIME) + dead_time + lag + min(age, stale_after)
     fresh = pose_trouble == 0 and not local and not age > memory[POSE_AGE] + since - 1e-9
     if watch_kernel(
         memory, out, fresh, x, y, heading, told_v, told_w, since, blur, half_track, patience, most, min(settings[29], top)
