@@ -47,7 +47,7 @@ from steerkit.memory_row import HEAD, PROGRESS, SILENT, SLOWEST, TIME, WATCH_HEA
 from steerkit.prediction import stop_end_kernel
 from steerkit.schedule import cut_stop_kernel, schedule_kernel, stops_kernel
 from steerkit.settings import Settings
-from steerkit.step import PASSED, RESULT, step_kernel
+from steerkit.step import PASSED, RESULT, passed_within_kernel, step_kernel, touched_kernel
 from steerkit.wheel_grid import on_grid_kernel
 
 sys.path.insert(0, str(Path(__file__).resolve().parent.parent / "tests"))
@@ -321,12 +321,21 @@ def parts(rng: np.random.Generator) -> Iterator[tuple[str, Any, Array]]:
         *rng.uniform(0.1, 1.0, 3),
         rng.uniform(0.0, 0.3),
     ]
+    yield "passed_within_alone", passed_within, np.append(rng.uniform(0.0, 1.0, len(Settings._fields)), rng.normal())
+    path = [*rng.normal(0.0, 1.0, 7), *rng.uniform(0.02, 0.5, 2), *rng.normal(0.0, 0.3, 2), rng.uniform(0.0, 0.5)]
+    path[8] *= rng.integers(2)  # no lag
+    yield "touched_alone", touched_kernel, np.array(path)
     yield "watch_alone", watched, np.concatenate([memory, [float(rng.random() < 0.9)], pose, seen])
 
 
 def scheduled(*numbers: float) -> tuple[float, float, float]:
     """Return the motion of the schedule and what slows; the last number says whether to turn on the spot."""
     return schedule_kernel(*numbers[:-1], bool(numbers[-1]))
+
+
+def passed_within(*numbers: float) -> float:
+    """Return how far away a way point just passed can be, squared; the last number is the speed."""
+    return passed_within_kernel(np.array(numbers[:-1]), numbers[-1])
 
 
 def watched(*numbers: float) -> list[float]:

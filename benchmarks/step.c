@@ -1056,7 +1056,7 @@ void step_apart(const double *settings, const double *memory, long size, const d
     Commands under_way = {memory + HEAD, rows, since, last, dead_time, lag};
     Motion motion = motion_then(
         &under_way, -(memory[BASE_AGE] + since), -least(age, stale_after), memory[BASE_SPEED], memory[BASE_TURN_RATE]);
-    Motion told = motion;
+    Motion told = motion_then(&under_way, -least(age, stale_after), 0.0, motion.v, motion.w);
     if (seen.motion.v == seen.motion.v)
         motion.v = seen.motion.v;
     if (seen.motion.w == seen.motion.w)
@@ -1077,7 +1077,7 @@ void step_apart(const double *settings, const double *memory, long size, const d
         ENTER(PATIENCE_TIME);
     else
         ENTER(PATIENCE_PERIODS);
-    double patience = most(ANSWERING_SILENT_PERIODS * period, ANSWERING_SILENT_TIME) + dead_time + lag;
+    double patience = most(ANSWERING_SILENT_PERIODS * period, ANSWERING_SILENT_TIME) + dead_time + lag + least(age, stale_after);
     bool new_pose = located && !(age > memory[POSE_AGE] + since - 1e-9);
     if (located && !new_pose)
         ENTER(WATCH_REPEATED);
@@ -1331,6 +1331,13 @@ void schedule_alone(const double *n, double *out)
 void stops_alone(const double *n, double *out) { *out = stops(n[0], n[1], n[2], n[3], n[4], n[5], n[6], n[7], n[8], n[9]); }
 
 void cut_stop_alone(const double *n, double *out) { *out = cut_stop(n[0], n[1], n[2], n[3]); }
+
+void passed_within_alone(const double *n, double *out) { *out = passed_within(n, n[S_MOST_RAISED + 1]); }
+
+void touched_alone(const double *n, double *out)
+{
+    *out = touched((Pose){n[0], n[1], n[2]}, (Motion){n[3], n[4]}, (Motion){n[5], n[6]}, n[7], n[8], n[9], n[10], n[11]);
+}
 
 void watch_alone(const double *n, double *out)
 {
