@@ -73,6 +73,7 @@ def common_draw(rng, distance: float, lag: bool = False, band: bool = False, spi
     if band:
         smallest = min(rng.uniform(0.0, min(0.08, min(speed, wheel) / 10.0)), 0.45 * turn * width / 2.0)
         step = min(rng.uniform(0.0, 0.02), 0.45 * turn * width / 2.0)
+        step = step if step > 1e-4 else 0.0  # finer is none
         platform = dataclasses.replace(platform, smallest_wheel_speed=smallest, wheel_speed_resolution=step)
     radius = log_uniform(rng, 0.03, 0.3)
     radius = max(radius, 1.3 * platform.slowest_wheel_speed * platform.period)
