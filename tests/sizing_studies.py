@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import argparse
 import math
 import sys
 import time
@@ -15,7 +14,7 @@ import numpy as np
 from closed_loop import CAPTURED, drive
 from robots import Robot, draw, draw_start
 from steerkit import Controller, Platform, gain_limits, margins, sizing
-from studies import FAR_GOAL, FREE, allowed, faster_than_workable
+from studies import FAR_GOAL, FREE, allowed, faster_than_workable, run
 
 BAND = 0.02
 
@@ -234,11 +233,4 @@ STUDIES = {
 }
 
 if __name__ == "__main__":
-    parser = argparse.ArgumentParser(description=__doc__)
-    parser.add_argument("--robots", type=int, default=200)
-    parser.add_argument("--only", default="", help="part of a study's name")
-    chosen = parser.parse_args()
-    for name, study in STUDIES.items():
-        if chosen.only in name:
-            began = time.monotonic()
-            print(f"{name}: {study(chosen.robots)}  ({time.monotonic() - began:.0f} s)", flush=True)
+    run(STUDIES, __doc__)

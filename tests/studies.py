@@ -6,6 +6,7 @@ import argparse
 import math
 import time
 from collections import Counter
+from collections.abc import Callable
 from typing import NamedTuple
 
 import numpy as np
@@ -382,12 +383,18 @@ STUDIES = {
     "proposals (refused, refused again)": lambda n: proposed_speeds(n, 18),
 }
 
-if __name__ == "__main__":
-    parser = argparse.ArgumentParser(description=__doc__)
+
+def run(studies: dict[str, Callable[[int], object]], description: str | None) -> None:
+    """Run the studies that the command line asks for, and print each with the time it took."""
+    parser = argparse.ArgumentParser(description=description)
     parser.add_argument("--robots", type=int, default=200)
     parser.add_argument("--only", default="", help="part of a study's name")
     chosen = parser.parse_args()
-    for name, study in STUDIES.items():
+    for name, study in studies.items():
         if chosen.only in name:
             began = time.monotonic()
             print(f"{name}: {study(chosen.robots)}  ({time.monotonic() - began:.0f} s)", flush=True)
+
+
+if __name__ == "__main__":
+    run(STUDIES, __doc__)

@@ -133,8 +133,6 @@ def following_distance(platform: Platform, capture_radius: float, speed: float, 
     >>> round(following_distance(cart, 0.10, 0.5), 3)
     0.277
     """
-    if not isinstance(platform, Platform):
-        raise TypeError(f"platform={platform!r} must be a Platform; build one from the robot's measured numbers")
     s = scheduled_settings(platform, checked_radius(platform, capture_radius), None)
     u = check_above_zero("speed", speed, "m/s", "give the speed of the goal")
     between = check_not_negative("every", every, "s", "give the time from one telling of the goal to the next, 0 for every step")

@@ -17,6 +17,7 @@ __all__ = ["Platform"]
 
 VERSION = 1
 SHORTEST_PERIOD = 1e-4  # s
+ON_STEP = 1e-10  # of a step of the wheel speed; nearer is on it
 SMALLEST = 1e-6  # of any other number that may not be 0
 VERSION_KEY = "steerkit_platform_version"
 
@@ -116,10 +117,7 @@ class Platform:
     @property
     def slowest_wheel_speed(self) -> float:
         """Slowest that a wheel can be told to run: the least step of the resolution that moves it (m/s); 0 where any will do."""
-        step = self.wheel_speed_resolution
-        if step == 0.0:
-            return self.smallest_wheel_speed
-        return step * max(1.0, math.ceil(self.smallest_wheel_speed / step - 1e-9))
+        return slowest_speed(self.smallest_wheel_speed, self.wheel_speed_resolution)
 
     @property
     def top_speed(self) -> float:
@@ -174,6 +172,13 @@ class Platform:
         if missing:
             raise ValueError(f"the platform file lacks {missing}; add them, each in the unit of its key")
         return cls(**{keys[key].name: value for key, value in rows.items()})
+
+
+def slowest_speed(smallest: float, step: float) -> float:
+    """Return the slowest speed but 0 that a wheel can be told; 0 where any will do. Compiled in `wheel_grid`, too."""
+    if not step > 0.0:
+        return smallest
+    return step * max(1.0, math.ceil(smallest / step - ON_STEP))
 
 
 def check_slowest(platform: Platform) -> None:

@@ -10,25 +10,19 @@ from __future__ import annotations
 import math
 
 from steerkit.compiled import kernel
+from steerkit.platforms import ON_STEP, slowest_speed
 
-CLOSE = 1e-10  # of a step; nearer is on it
+CLOSE = ON_STEP
 IN_BAND = 4.0  # weight of a wheel within the dead band
 TURNING, PATH, SPOT = 2.0, 0.5, 4.0  # weights: wheels apart from each other; both from the path; the same on the spot
+slowest_kernel = kernel(slowest_speed)  # of the speed in use, which may have been raised
 
 
 @kernel
-def slowest_kernel(smallest: float, step: float) -> float:
-    """Return the slowest speed but 0 that a wheel can be told; 0 where any will do."""
-    if not step > 0.0:
-        return smallest
-    return step * max(1.0, math.ceil(smallest / step - CLOSE))
-
-
-@kernel
-def choice_kernel(i: int, ramp: float, other: float, slowest: float, step: float, low: float, high: float) -> float:
+def choice_kernel(i: int, ramp: float, slowest: float, step: float, low: float, high: float) -> float:
     """Return the i-th of five speeds that a wheel may be given, NaN for none.
 
-    `low`, `high`: what the speed of the other wheel, `other`, leaves.
+    `low`, `high`: what the speed of the other wheel leaves.
     """
     if abs(ramp) < slowest:
         given = -slowest if i == 0 else (0.0 if i == 1 else (slowest if i == 2 else math.nan))
@@ -76,11 +70,11 @@ def on_grid_kernel(
     fastest = max(wheel, abs(v1) + abs(w1) * half_track) * (1.0 + CLOSE)
     best, best_a, best_b = math.inf, 0.0, 0.0
     for i in range(3):
-        given_a = choice_kernel(i, a, 0.0, slowest, step, -fastest, fastest)
+        given_a = choice_kernel(i, a, slowest, step, -fastest, fastest)
         if given_a == given_a and abs(given_a) <= fastest:
             low, high = max(least - given_a, given_a - apart, -fastest), min(most - given_a, given_a + apart, fastest)
             for j in range(5):
-                given_b = choice_kernel(j, b, given_a, slowest, step, low, high)
+                given_b = choice_kernel(j, b, slowest, step, low, high)
                 if given_b == given_b and low - CLOSE * slowest <= given_b <= high + CLOSE * slowest:
                     off_a, off_b = given_a - aim_a, given_b - aim_b
                     cost = weight_a * abs(off_a) + weight_b * abs(off_b) + TURNING * abs(off_a - off_b) + path * abs(off_a + off_b)
